@@ -1,0 +1,209 @@
+"""What a model predicts: the particle, how it annihilates, scatters and is produced.
+
+A `Candidate` is the only thing that passes between models and terms. What several terms need (the relic abundance above
+all) is computed once, on first use. Masses and widths are in GeV, cross sections in cm^2 or GeV^-2 as named.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass, field
+from functools import cached_property
+from typing import Final, Literal
+
+import numpy as np
+
+from scanfit.contracts import Quantity
+from scanfit.priors import FloatArray
+from scanfit.validation import Options
+
+from .constants import GEV_M2_TO_CM2, GEV_M2_TO_CM3_S, NEUTRON_MASS, OMEGA_H2_OBSERVED, PROTON_MASS
+from .relic_abundance.freeze_out import FreezeOut, freeze_out
+
+CHANNELS: Final = (
+    "uu", "dd", "ss", "cc", "bb", "tt", "ee", "mumu", "tautau", "nunu", "gg", "WW", "ZZ", "hh", "Zh", "gammagamma",
+    "dark",
+)  # fmt: skip
+"""Names of two-body final states, the same in every model and term. "dark" is anything invisible and long-lived."""
+
+DWARF_VELOCITY: Final = 5.0e-5
+"""Relative velocity (c = 1) at which dwarf satellites annihilate: about 15 km/s."""
+
+
+class CosmologyOptions(Options):
+    """Keys that every dark-matter model takes in ``[model]`` besides its own."""
+
+    underabundant: Literal["scale", "assume-all"] = "scale"
+    """Whether signals scale with the candidate's fraction f of the dark matter: rates f, annihilation f^2."""
+    equation_of_state: str = "saikawa-shirai"
+    """Table of the primordial degrees of freedom; see `relic_abundance.degrees_of_freedom`."""
+    omega_h2_observed: float = OMEGA_H2_OBSERVED
+
+
+@dataclass(frozen=True)
+class Annihilation:
+    """Annihilation into two-body final states.
+
+    Parameters
+    ----------
+    channels : tuple of str
+        Names from `CHANNELS`.
+    sigma_v : callable
+        Takes s in GeV^2, shape (n,), all >= 4 m^2, ascending or not; returns sigma v_rel in GeV^-2, shape
+        (len(channels), n), with v_rel = 2 sqrt(1 - 4 m^2/s). For a Dirac particle this is particle on antiparticle,
+        without the factor 1/2 of the number-density equation. Finite at s = 4 m^2.
+    total : callable
+        Sum of `sigma_v` over channels, shape (n,); a separate kernel because the relic abundance lives on it.
+    poles : tuple of (mass, width)
+        s-channel resonances, both in GeV.
+    thresholds : tuple of float
+        Values of sqrt(s) in GeV at which a channel opens (those above 2 m matter).
+    """
+
+    channels: tuple[str, ...]
+    sigma_v: Callable[[FloatArray], FloatArray]
+    total: Callable[[FloatArray], FloatArray]
+    poles: tuple[tuple[float, float], ...] = ()
+    thresholds: tuple[float, ...] = ()
+
+
+@dataclass(frozen=True)
+class NucleonCouplings:
+    """Effective contact couplings to nucleons in GeV^-2, signs kept.
+
+    Cross sections at zero momentum transfer are sigma_SI = 4 mu^2 f^2/pi and sigma_SD = 12 mu^2 a^2/pi.
+    """
+
+    f_proton: float = 0.0
+    f_neutron: float = 0.0
+    a_proton: float = 0.0
+    a_neutron: float = 0.0
+
+
+@dataclass(frozen=True)
+class SpinOneMediator:
+    """A spin-one mediator with universal couplings; all decay widths follow from it (`mediator_widths`)."""
+
+    mass: float
+    width: float
+    coupling: Literal["vector", "axial"]
+    g_quark: float
+    g_dark: float
+    g_lepton: float
+
+
+@dataclass(frozen=True)
+class Candidate:
+    """A dark-matter particle and its interactions at one point of parameter space.
+
+    Parameters
+    ----------
+    mass : float
+        GeV.
+    self_conjugate : bool
+        Whether the particle is its own antiparticle.
+    spin_degrees_of_freedom : int
+        Of the particle alone: 1 real scalar, 2 Majorana or Dirac, 3 real vector.
+    annihilation : Annihilation
+        Into everything that the relic abundance counts.
+    nucleon : NucleonCouplings or None
+        None when the model says nothing about scattering.
+    mediator : SpinOneMediator or None
+        What a collider would produce.
+    higgs_invisible_width : float or None
+        Partial width of the Higgs boson into the dark sector in GeV; None when the model leaves the Higgs boson alone.
+    cosmology : CosmologyOptions
+        Treatment of the abundance.
+    own_flags : mapping
+        The model's validity flags.
+    own_quantities : mapping
+        The model's further derived quantities.
+    """
+
+    mass: float
+    self_conjugate: bool
+    spin_degrees_of_freedom: int
+    annihilation: Annihilation
+    nucleon: NucleonCouplings | None = None
+    mediator: SpinOneMediator | None = None
+    higgs_invisible_width: float | None = None
+    cosmology: CosmologyOptions = field(default_factory=CosmologyOptions)
+    own_flags: Mapping[str, bool] = field(default_factory=dict)
+    own_quantities: Mapping[str, float] = field(default_factory=dict)
+
+    @cached_property
+    def relic(self) -> FreezeOut:
+        """Freeze-out solution, with its flags."""
+        return freeze_out(
+            mass=self.mass,
+            degrees_of_freedom=self.spin_degrees_of_freedom,
+            self_conjugate=self.self_conjugate,
+            annihilation=self.annihilation,
+            equation_of_state=self.cosmology.equation_of_state,
+        )
+
+    @property
+    def omega_h2(self) -> float:
+        """Relic abundance of particles and antiparticles together."""
+        return self.relic.omega_h2
+
+    @cached_property
+    def dm_fraction(self) -> float:
+        """Fraction of the dark matter, by which rates scale (annihilation by its square)."""
+        if self.cosmology.underabundant == "assume-all":
+            return 1.0
+        return min(1.0, self.omega_h2 / self.cosmology.omega_h2_observed)
+
+    @cached_property
+    def sigma_v_channels(self) -> FloatArray:
+        """Cross section times velocity today by channel, cm^3/s, shape (n_channels,), at `DWARF_VELOCITY`."""
+        s = 4.0 * self.mass**2 / (1.0 - 0.25 * DWARF_VELOCITY**2)
+        return self.annihilation.sigma_v(np.array([s]))[:, 0] * GEV_M2_TO_CM3_S
+
+    @property
+    def sigma_v_today(self) -> float:
+        """Total cross section times velocity today, cm^3/s, without any rescaling."""
+        return float(self.sigma_v_channels.sum())
+
+    def nucleon_cross_sections(self) -> dict[str, float]:
+        """Zero-momentum cross sections on nucleons in cm^2; NaN when the model does not predict them."""
+        if self.nucleon is None:
+            return dict.fromkeys(
+                ("sigma_si_proton", "sigma_si_neutron", "sigma_sd_proton", "sigma_sd_neutron"), math.nan
+            )
+        mu_proton = self.mass * PROTON_MASS / (self.mass + PROTON_MASS)
+        mu_neutron = self.mass * NEUTRON_MASS / (self.mass + NEUTRON_MASS)
+        scale = GEV_M2_TO_CM2 / math.pi
+        return {
+            "sigma_si_proton": 4.0 * scale * (mu_proton * self.nucleon.f_proton) ** 2,
+            "sigma_si_neutron": 4.0 * scale * (mu_neutron * self.nucleon.f_neutron) ** 2,
+            "sigma_sd_proton": 12.0 * scale * (mu_proton * self.nucleon.a_proton) ** 2,
+            "sigma_sd_neutron": 12.0 * scale * (mu_neutron * self.nucleon.a_neutron) ** 2,
+        }
+
+    def derived(self) -> dict[str, float]:
+        """Values of `QUANTITIES` and of the model's own quantities."""
+        return {
+            "omega_h2": self.omega_h2,
+            "dm_fraction": self.dm_fraction,
+            **self.nucleon_cross_sections(),
+            "sigma_v_today": self.sigma_v_today,
+            **self.own_quantities,
+        }
+
+    def flags(self) -> dict[str, bool]:
+        """Validity flags of the relic abundance and of the model."""
+        return {**self.relic.flags, **self.own_flags}
+
+
+QUANTITIES: Final = (
+    Quantity("omega_h2", "", r"\Omega h^2", "relic abundance"),
+    Quantity("dm_fraction", "", r"f_\mathrm{DM}", "fraction of the dark matter that scales the signals"),
+    Quantity("sigma_si_proton", "cm²", r"\sigma^\mathrm{SI}_p", "spin-independent cross section on protons"),
+    Quantity("sigma_si_neutron", "cm²", r"\sigma^\mathrm{SI}_n", "spin-independent cross section on neutrons"),
+    Quantity("sigma_sd_proton", "cm²", r"\sigma^\mathrm{SD}_p", "spin-dependent cross section on protons"),
+    Quantity("sigma_sd_neutron", "cm²", r"\sigma^\mathrm{SD}_n", "spin-dependent cross section on neutrons"),
+    Quantity("sigma_v_today", "cm³/s", r"\langle\sigma v\rangle_0", "annihilation cross section times velocity today"),
+)
+"""Derived quantities that every dark-matter model has."""

@@ -1,0 +1,198 @@
+"""Write what a finished scan leaves: posterior points, history, profile table and summary."""
+
+from __future__ import annotations
+
+import dataclasses
+import math
+from collections.abc import Mapping
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+import pandas as pd
+import pyarrow as pa
+
+from scanfit.contracts import Exploration, Observable
+from scanfit.posterior import Posterior, Status
+from scanfit.priors import LogNormal, LogUniform
+from scanfit.results import EXPLORERS, FIGURES, HISTORY, POSTERIOR, PROFILE, SUMMARY, Axis
+from scanfit.runfile import RunFile
+from scanfit.space import Parameter
+from scanfit.statistics.comparison import compare
+from scanfit.statistics.credible import intervals
+from scanfit.statistics.profile import profile_table
+from scanfit.store.archive import PointsArchive
+from scanfit.store.atomic import replacing, write_json, write_table
+
+EXPLORATION = "exploration.json"
+
+
+def save_exploration(
+    folder: Path, name: str, exploration: Exploration, posterior: Posterior, archive: PointsArchive, seconds: float
+) -> None:
+    """Write one explorer's weighted points, curves and verdict under ``explorers/<name>/``.
+
+    The verdict comes last: it says that the rest is whole.
+    """
+    home = folder / EXPLORERS / name
+    home.mkdir(parents=True, exist_ok=True)
+    points = posterior.space.from_unit(exploration.unit_points)
+    frame = archive.take(archive.row_numbers(points))
+    frame["weight"] = np.exp(exploration.log_weights - np.logaddexp.reduce(exploration.log_weights))
+    _write_frame(home / POSTERIOR, frame)
+    with replacing(home / HISTORY) as file:
+        np.savez(file, **exploration.history)
+    verdict = {
+        "converged": exploration.converged,
+        "verdict": exploration.verdict,
+        "log_evidence": exploration.log_evidence,
+        "log_evidence_error": exploration.log_evidence_error,
+        "effective_points": float(1.0 / np.square(frame["weight"]).sum()),
+        "calls": len(archive),
+        "wall_seconds": seconds,
+        "diagnostics": exploration.diagnostics,
+    }
+    write_json(home / EXPLORATION, verdict)
+
+
+def write_summary(
+    folder: Path, run_file: RunFile, archive: PointsArchive, explorations: Mapping[str, Mapping[str, Any]]
+) -> dict[str, Any]:
+    """Compute intervals, profiles and comparisons, and write them; ``summary.json`` comes last.
+
+    Parameters
+    ----------
+    folder : Path
+        The run folder.
+    run_file : RunFile
+        What was run.
+    archive : PointsArchive
+        Every point evaluated.
+    explorations : mapping of str to mapping
+        What `save_exploration` wrote, by explorer.
+    """
+    posterior = run_file.posterior
+    posteriors = {name: pd.read_parquet(folder / EXPLORERS / name / POSTERIOR) for name in explorations}
+    first = next(iter(posteriors.values()))
+    _write_frame(folder / POSTERIOR, first)
+    axes = {item["name"]: _axis(item) for item in [*parameter_entries(posterior), *quantity_entries(posterior)]}
+    wanted = [*posterior.space.free_names, *(quantity.name for quantity in posterior.quantities)]
+    drawable = {name: axes[name] for name in wanted if name in axes}
+    points = archive.frame([*drawable, "log_likelihood", "status", *posterior.term_columns])
+    points = points[points["status"] == Status.EVALUATED]
+    _write_frame(folder / PROFILE, profile_table(points, drawable, run_file.figures.planes))
+    evidence = next((e for e in explorations.values() if e["log_evidence"] is not None), None)
+    best = best_fit(posterior, archive)
+    summary: dict[str, Any] = {
+        "title": run_file.run.title,
+        "model": dict(run_file.data["model"]),
+        "finished": True,
+        "converged": all(e["converged"] for e in explorations.values()),
+        "caveats": run_file.caveats,
+        "inner_nuisances": run_file.run.inner_nuisances,
+        "best_fit": best,
+        "log_evidence": evidence["log_evidence"] if evidence else None,
+        "log_evidence_error": evidence["log_evidence_error"] if evidence else None,
+        "intervals": intervals(first, points, drawable),
+        "explorers": explorations,
+        "comparison": compare(posteriors, list(posterior.space.free_names)),
+        "diagnostics": {name: exploration["diagnostics"] for name, exploration in explorations.items()},
+        "flags": _flags(posterior, first, best),
+        "terms": {
+            name: {"use": term.name, "summary": term.summary, "caveats": term.caveats}
+            for name, term in posterior.terms.items()
+        },
+        "parameters": parameter_entries(posterior),
+        "quantities": quantity_entries(posterior),
+        "planes": run_file.figures.planes,
+        "calls": len(archive),
+        "failed_points": len(archive) - len(points),
+        "wall_seconds": sum(e["wall_seconds"] for e in explorations.values()),
+    }
+    write_json(folder / SUMMARY, summary)
+    (folder / FIGURES).mkdir(exist_ok=True)
+    return summary
+
+
+def best_fit(posterior: Posterior, archive: PointsArchive) -> dict[str, Any]:
+    """The archived point of highest likelihood, with everything known about it."""
+    likelihoods = archive.frame(["log_likelihood"])["log_likelihood"].to_numpy()
+    highest = archive.take(np.array([int(np.argmax(likelihoods))]), list(posterior.space.free_names))
+    return describe_point(posterior, posterior.space.values(highest.to_numpy(dtype=float)[0]))
+
+
+def describe_point(posterior: Posterior, values: Mapping[str, float]) -> dict[str, Any]:
+    """Log-likelihoods, derived quantities, flags and predicted beside observed at one point.
+
+    Parameters
+    ----------
+    values : mapping
+        All parameters by name.
+    """
+    batch = posterior.evaluate(values)
+    row = dict(zip(posterior.columns, batch.rows[0].tolist(), strict=True))
+    failure = batch.failures[0] if batch.failures else None
+    explained: Mapping[str, Any] = posterior.explain(values) if failure is None else {}
+    return {
+        "values": dict(values),
+        "log_prior": row["log_prior"],
+        "log_likelihood": row["log_likelihood"],
+        "terms": {name: row[f"loglike_{name}"] for name in posterior.terms},
+        "derived": {quantity.name: row[quantity.name] for quantity in posterior.quantities},
+        "flags": {name: row[f"flag_{name}"] == 1.0 for name in posterior.flag_names},
+        "explain": {name: [_observable(item) for item in items] for name, items in explained.items()},
+        **({"failure": f"{failure.culprit}: {failure.message}"} if failure else {}),
+    }
+
+
+def parameter_entries(posterior: Posterior) -> list[dict[str, Any]]:
+    """What the summary says of each parameter."""
+    free = set(posterior.space.free_names)
+    return [_parameter_entry(parameter, parameter.name in free) for parameter in posterior.space.parameters]
+
+
+def quantity_entries(posterior: Posterior) -> list[dict[str, Any]]:
+    """What the summary says of each derived quantity."""
+    return [{**dataclasses.asdict(quantity), "label": quantity.label} for quantity in posterior.quantities]
+
+
+def _parameter_entry(parameter: Parameter, free: bool) -> dict[str, Any]:
+    prior = parameter.prior
+    assert prior is not None  # a space holds no parameter without one
+    low, high = prior.support
+    return {
+        "name": parameter.name,
+        "unit": parameter.unit,
+        "symbol": parameter.symbol,
+        "label": parameter.label,
+        "kind": parameter.kind,
+        "description": parameter.description,
+        "free": free,
+        "scale": "log" if isinstance(prior, LogUniform | LogNormal) else "linear",
+        "low": low if math.isfinite(low) and low != 0.0 else None,
+        "high": high if math.isfinite(high) else None,
+        "prior": prior.model_dump(by_alias=True),
+    }
+
+
+def _axis(entry: Mapping[str, Any]) -> Axis:
+    return Axis(entry["name"], entry["label"], entry["scale"], entry.get("low"), entry.get("high"))
+
+
+def _flags(posterior: Posterior, first: pd.DataFrame, best: Mapping[str, Any]) -> dict[str, Any]:
+    return {
+        name: {
+            "meaning": posterior.model.flag_names[name],
+            "posterior_fraction": float(first.loc[first[f"flag_{name}"] == 1.0, "weight"].sum()),
+            "best_fit": best["flags"][name],
+        }
+        for name in posterior.flag_names
+    }
+
+
+def _write_frame(path: Path, frame: pd.DataFrame) -> None:
+    write_table(path, pa.Table.from_pandas(frame, preserve_index=False))
+
+
+def _observable(item: Observable) -> dict[str, Any]:
+    return dataclasses.asdict(item)
