@@ -19,6 +19,7 @@ from scanfit.priors import FloatArray
 from scanfit.validation import Options
 
 from .constants import GEV_M2_TO_CM2, GEV_M2_TO_CM3_S, NEUTRON_MASS, OMEGA_H2_OBSERVED, PROTON_MASS
+from .relic_abundance.degrees_of_freedom import EquationOfState
 from .relic_abundance.freeze_out import FreezeOut, freeze_out
 
 CHANNELS: Final = (
@@ -36,8 +37,8 @@ class CosmologyOptions(Options):
 
     underabundant: Literal["scale", "assume-all"] = "scale"
     """Whether signals scale with the candidate's fraction f of the dark matter: rates f, annihilation f^2."""
-    equation_of_state: str = "saikawa-shirai"
-    """Table of the primordial degrees of freedom; see `relic_abundance.degrees_of_freedom`."""
+    equation_of_state: EquationOfState = "arxiv-1803.01038"
+    """Source of the primordial degrees of freedom; see `relic_abundance.degrees_of_freedom`."""
     omega_h2_observed: float = OMEGA_H2_OBSERVED
 
 

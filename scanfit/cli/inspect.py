@@ -19,13 +19,13 @@ from scanfit.errors import RunFolderError
 def status(folder: Path, as_json: bool) -> None:
     """Show how far the run in FOLDER is; works from another terminal while it runs."""
     from scanfit.driver.scan import STATUS
-    from scanfit.store.lock import is_held
+    from scanfit.store.lock import RunLock
 
     try:
         found: dict[str, Any] = json.loads((folder / STATUS).read_text(encoding="utf-8"))
     except OSError:
         raise RunFolderError(f"{folder} holds no scanfit run that has begun: {STATUS} is missing") from None
-    if found["phase"] == "running" and not is_held(folder):
+    if found["phase"] == "running" and RunLock.holder(folder) is None:
         found["phase"] = "dead"
     found["seconds_since_written"] = time.time() - found.pop("written")
     if as_json:

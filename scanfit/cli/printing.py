@@ -11,6 +11,8 @@ import click
 from rich.console import Console
 from rich.table import Table
 
+_WIDTH_OF_A_FILE = 160
+
 
 def number(value: Any) -> str:
     """Four significant digits; a dash for what does not exist."""
@@ -36,8 +38,9 @@ def print_json(value: Mapping[str, Any]) -> None:
 
 
 def console(stderr: bool = False) -> Console:
-    """A console on standard output or standard error."""
-    return Console(stderr=stderr)
+    """A console on standard output or standard error; lines in a file or a pipe may be long."""
+    made = Console(stderr=stderr)
+    return made if made.is_terminal else Console(stderr=stderr, width=_WIDTH_OF_A_FILE)
 
 
 def _finite(value: Any) -> Any:

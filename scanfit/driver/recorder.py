@@ -72,7 +72,6 @@ class Recorder:
         self._failed = int((known["status"] != Status.EVALUATED).sum())
         self._started = self._flushed = self._reported = time.monotonic()
         self._evaluated = self._answered = 0
-        self._latest_failure = ""
         self._explorer, self._progress = "", Progress("start")
 
     def begin(self, explorer: str) -> None:
@@ -127,7 +126,6 @@ class Recorder:
     def flush(self) -> None:
         """Bring everything known to disk."""
         self._archive.flush()
-        self._failures.flush()
         self._flushed = time.monotonic()
         self._on_flush(self.tally())
 
@@ -139,16 +137,17 @@ class Recorder:
         self._evaluated += len(batch.rows)
         self._best = max(self._best, float(batch.rows[:, self._likelihood_column].max()))
         self._failed += int((batch.rows[:, self._status_column] != Status.EVALUATED).sum())
-        if batch.failures:
-            self._failures.add(batch)
-            self._latest_failure = f"{batch.failures[-1].culprit}: {batch.failures[-1].message}"
+        for failure in batch.failures:
+            values = self._space.values(batch.rows[failure.row, : self._space.dimension])
+            self._failures.add(values, failure.culprit, failure.message)
 
     def _judge_failures(self) -> None:
         total = len(self._archive)
         if total < _FEWEST_POINTS_TO_JUDGE or self._failed <= self._failed_fraction_maximum * total:
             return
+        latest = self._failures.latest()
         rule = f"run.failed_fraction_maximum = {self._failed_fraction_maximum:g}"
         raise ScanStopped(
             f"{self._failed} of {total} points could not be evaluated, more than {rule} allows"
-            + (f"; the latest: {self._latest_failure}" if self._latest_failure else "")
+            + (f"; the latest: {latest}" if latest else "")
         )

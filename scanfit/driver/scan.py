@@ -19,22 +19,20 @@ from scanfit.driver.interruption import Interruption
 from scanfit.driver.recorder import Recorder
 from scanfit.driver.reporter import Reporter, Silent, Tally
 from scanfit.driver.summary import EXPLORATION, save_exploration, write_summary
-from scanfit.errors import InputError, MissingPrediction, PointError, Problem, RunFolderError, ScanStopped
+from scanfit.errors import InputError, MissingPrediction, PointError, Problem, RunFolderError, ScanfitError, ScanStopped
 from scanfit.posterior import Posterior
 from scanfit.results import EXPLORERS, FIGURES, POINTS, POSTERIOR, PROFILE, REPORT, SUMMARY
 from scanfit.runfile import HARMLESS_KEYS, PlannedExplorer, RunFile, load_posterior
 from scanfit.store.archive import PointsArchive
 from scanfit.store.atomic import write_json
 from scanfit.store.failures import FailureLog
-from scanfit.store.fingerprint import take_fingerprint
 from scanfit.store.lock import RunLock
-from scanfit.store.manifest import NAME as MANIFEST
-from scanfit.store.manifest import Manifest, check_same_run, describe_machine, write_manifest
+from scanfit.store.manifest import MANIFEST, Manifest
 from scanfit.workers.contract import Workers
 from scanfit.workers.start import start_workers
 
 STATUS = "status.json"
-FAILURES = "failures.json"
+FAILURES = "failures.jsonl"
 
 
 @dataclass(frozen=True)
@@ -89,20 +87,15 @@ def run(
             _clear(out)
         elif strangers and not (out / MANIFEST).is_file():
             raise RunFolderError(f"{out} is not empty and holds no scanfit run; choose another folder with --out")
-        fingerprint = take_fingerprint(
-            run_file.data,
-            _sources(run_file),
-            run_file.data_files,
-            folder=run_file.path.parent,
-            harmless=HARMLESS_KEYS,
-        )
-        known = check_same_run(out, fingerprint)
+        manifest = Manifest.of_run(run_file.data, HARMLESS_KEYS, run_file.data_files, _sources(run_file))
+        _check_identity(out, manifest)
         finished = _finished_summary(out, run_file)
         if finished is not None:
+            if not (out / REPORT).is_file():
+                draw(out)  # killed, or failed, between the results and their pictures
             return Outcome(out, finished, was_finished=True)
         check_predictions(run_file.posterior)
-        if known is None:
-            write_manifest(out, Manifest(fingerprint, describe_machine()))
+        manifest.write(out / MANIFEST)
         archive = PointsArchive(out / POINTS, run_file.posterior.columns, run_file.posterior.space.dimension)
         for notice in archive.notices:
             reporter.note(notice)
@@ -114,7 +107,7 @@ def run(
         recorder = Recorder(
             run_file.posterior,
             archive,
-            FailureLog(out / FAILURES, run_file.posterior.space.free_names),
+            FailureLog(out / FAILURES),
             pool,
             reporter,
             interruption,
@@ -140,8 +133,25 @@ def run(
 
 
 def draw(folder: Path) -> list[Path]:
-    """Make every installed figure and report of a finished run folder; return the files written."""
-    return [path for point in plugins.installed("figures").values() for path in point.load()(folder)]
+    """Make every installed figure and report of a finished run folder; return the files written.
+
+    Raises
+    ------
+    ScanfitError
+        If a figure cannot be drawn; the results themselves are whole.
+    """
+    files: list[Path] = []
+    for name, point in plugins.installed("figures").items():
+        try:
+            files += point.load()(folder)
+        except ScanfitError:
+            raise
+        except Exception as error:  # a figure plug-in may raise anything
+            raise ScanfitError(
+                f"the results in {folder} are complete, but {name} cannot be drawn: {type(error).__name__}: {error}; "
+                f"'scanfit report {folder}' tries again"
+            ) from error
+    return files
 
 
 def check_predictions(posterior: Posterior) -> None:
@@ -214,11 +224,14 @@ def _workers(run_file: RunFile, workers: int | None) -> Workers:
     )
 
 
-def _sources(run_file: RunFile) -> list[type[Any]]:
+def _sources(run_file: RunFile) -> dict[str, type[Any]]:
     """The classes whose source is part of the run's identity."""
     posterior = run_file.posterior
-    terms = [type(term) for term in posterior.terms.values()]
-    return [type(posterior.model), *terms, *(planned.kind for planned in run_file.explorers)]
+    return {
+        "model": type(posterior.model),
+        **{f"terms.{name}": type(term) for name, term in posterior.terms.items()},
+        **{f"explore.{planned.name}": planned.kind for planned in run_file.explorers},
+    }
 
 
 def _make_folder(out: Path) -> None:
@@ -226,6 +239,17 @@ def _make_folder(out: Path) -> None:
         out.mkdir(parents=True, exist_ok=True)
     except OSError as error:
         raise RunFolderError(f"{out} cannot be made: {error.strerror}") from None
+
+
+def _check_identity(out: Path, manifest: Manifest) -> None:
+    path = out / MANIFEST
+    changes = Manifest.read(path).changes(manifest) if path.is_file() else []
+    if changes:
+        listed = "\n  ".join(changes)
+        raise RunFolderError(
+            f"{out} holds another run. What changed:\n  {listed}\n"
+            "Undo the change to carry on, run with --fresh to start again, or with --out for another folder."
+        )
 
 
 def _finished_summary(out: Path, run_file: RunFile) -> dict[str, Any] | None:

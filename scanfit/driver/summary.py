@@ -10,19 +10,20 @@ from typing import Any
 
 import numpy as np
 import pandas as pd
-import pyarrow as pa
 
 from scanfit.contracts import Exploration, Observable
 from scanfit.posterior import Posterior, Status
-from scanfit.priors import LogNormal, LogUniform
+from scanfit.priors import LogNormal, LogUniform, Prior
 from scanfit.results import EXPLORERS, FIGURES, HISTORY, POSTERIOR, PROFILE, SUMMARY, Axis
 from scanfit.runfile import RunFile
 from scanfit.space import Parameter
+from scanfit.statistics.binned import log_constraint
 from scanfit.statistics.comparison import compare
-from scanfit.statistics.credible import intervals
+from scanfit.statistics.marginals import intervals
 from scanfit.statistics.profile import profile_table
 from scanfit.store.archive import PointsArchive
-from scanfit.store.atomic import replacing, write_json, write_table
+from scanfit.store.atomic import write_json, write_npz, write_parquet
+from scanfit.store.fingerprint import package_versions
 
 EXPLORATION = "exploration.json"
 
@@ -39,15 +40,16 @@ def save_exploration(
     points = posterior.space.from_unit(exploration.unit_points)
     frame = archive.take(archive.row_numbers(points))
     frame["weight"] = np.exp(exploration.log_weights - np.logaddexp.reduce(exploration.log_weights))
-    _write_frame(home / POSTERIOR, frame)
-    with replacing(home / HISTORY) as file:
-        np.savez(file, **exploration.history)
+    write_parquet(home / POSTERIOR, frame)
+    write_npz(home / HISTORY, exploration.history)
     verdict = {
         "converged": exploration.converged,
         "verdict": exploration.verdict,
         "log_evidence": exploration.log_evidence,
         "log_evidence_error": exploration.log_evidence_error,
-        "effective_points": float(1.0 / np.square(frame["weight"]).sum()),
+        "effective_samples": exploration.diagnostics.get(
+            "effective_samples", float(1.0 / np.square(frame["weight"]).sum())
+        ),
         "calls": len(archive),
         "wall_seconds": seconds,
         "diagnostics": exploration.diagnostics,
@@ -74,14 +76,20 @@ def write_summary(
     posterior = run_file.posterior
     posteriors = {name: pd.read_parquet(folder / EXPLORERS / name / POSTERIOR) for name in explorations}
     first = next(iter(posteriors.values()))
-    _write_frame(folder / POSTERIOR, first)
+    write_parquet(folder / POSTERIOR, first)
     axes = {item["name"]: _axis(item) for item in [*parameter_entries(posterior), *quantity_entries(posterior)]}
     wanted = [*posterior.space.free_names, *(quantity.name for quantity in posterior.quantities)]
     drawable = {name: axes[name] for name in wanted if name in axes}
     points = archive.frame([*drawable, "log_likelihood", "status", *posterior.term_columns])
     points = points[points["status"] == Status.EVALUATED]
-    _write_frame(folder / PROFILE, profile_table(points, drawable, run_file.figures.planes))
-    evidence = next((e for e in explorations.values() if e["log_evidence"] is not None), None)
+    constraints = nuisance_constraints(posterior)
+    write_parquet(folder / PROFILE, profile_table(points, drawable, run_file.figures.planes, constraints))
+    evidences = {
+        name: (found["log_evidence"], found["log_evidence_error"])
+        for name, found in explorations.items()
+        if found["log_evidence"] is not None
+    }
+    log_evidence, log_evidence_error = next(iter(evidences.values()), (None, None))
     best = best_fit(posterior, archive)
     summary: dict[str, Any] = {
         "title": run_file.run.title,
@@ -91,11 +99,16 @@ def write_summary(
         "caveats": run_file.caveats,
         "inner_nuisances": run_file.run.inner_nuisances,
         "best_fit": best,
-        "log_evidence": evidence["log_evidence"] if evidence else None,
-        "log_evidence_error": evidence["log_evidence_error"] if evidence else None,
-        "intervals": intervals(first, points, drawable),
+        "log_evidence": log_evidence,
+        "log_evidence_error": log_evidence_error,
+        "intervals": intervals(first, points, drawable, constraints),
         "explorers": explorations,
-        "comparison": compare(posteriors, list(posterior.space.free_names)),
+        "comparison": compare(
+            posteriors,
+            {name: drawable[name] for name in posterior.space.free_names},
+            evidences=evidences,
+            effective_sizes={name: found["effective_samples"] for name, found in explorations.items()},
+        ),
         "diagnostics": {name: exploration["diagnostics"] for name, exploration in explorations.items()},
         "flags": _flags(posterior, first, best),
         "terms": {
@@ -108,17 +121,25 @@ def write_summary(
         "calls": len(archive),
         "failed_points": len(archive) - len(points),
         "wall_seconds": sum(e["wall_seconds"] for e in explorations.values()),
+        "versions": package_versions(),
     }
     write_json(folder / SUMMARY, summary)
     (folder / FIGURES).mkdir(exist_ok=True)
     return summary
 
 
+def nuisance_constraints(posterior: Posterior) -> dict[str, Prior]:
+    """Priors of the free nuisances, which a profile likelihood counts as measurements of them."""
+    return {p.name: posterior.space.prior(p.name) for p in posterior.space.free if p.kind == "nuisance"}
+
+
 def best_fit(posterior: Posterior, archive: PointsArchive) -> dict[str, Any]:
-    """The archived point of highest likelihood, with everything known about it."""
-    likelihoods = archive.frame(["log_likelihood"])["log_likelihood"].to_numpy()
-    highest = archive.take(np.array([int(np.argmax(likelihoods))]), list(posterior.space.free_names))
-    return describe_point(posterior, posterior.space.values(highest.to_numpy(dtype=float)[0]))
+    """The archived point of highest likelihood, constraints on nuisances included, with everything known about it."""
+    names = list(posterior.space.free_names)
+    points = archive.frame([*names, "log_likelihood"])
+    height = points["log_likelihood"].to_numpy() + log_constraint(points, nuisance_constraints(posterior))
+    highest = points.iloc[int(np.argmax(height))]
+    return describe_point(posterior, posterior.space.values(highest[names].to_numpy(dtype=float)))
 
 
 def describe_point(posterior: Posterior, values: Mapping[str, float]) -> dict[str, Any]:
@@ -169,7 +190,7 @@ def _parameter_entry(parameter: Parameter, free: bool) -> dict[str, Any]:
         "description": parameter.description,
         "free": free,
         "scale": "log" if isinstance(prior, LogUniform | LogNormal) else "linear",
-        "low": low if math.isfinite(low) and low != 0.0 else None,
+        "low": low if math.isfinite(low) and not (low == 0.0 and isinstance(prior, LogNormal)) else None,
         "high": high if math.isfinite(high) else None,
         "prior": prior.model_dump(by_alias=True),
     }
@@ -188,10 +209,6 @@ def _flags(posterior: Posterior, first: pd.DataFrame, best: Mapping[str, Any]) -
         }
         for name in posterior.flag_names
     }
-
-
-def _write_frame(path: Path, frame: pd.DataFrame) -> None:
-    write_table(path, pa.Table.from_pandas(frame, preserve_index=False))
 
 
 def _observable(item: Observable) -> dict[str, Any]:

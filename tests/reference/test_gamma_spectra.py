@@ -1,0 +1,208 @@
+"""The shipped photon spectra against published fits, published multiplicities and simulation kept out of the table.
+
+"Independent simulation" below means another run of the same general-purpose generator (1500-2500 events of
+e+e- -> f fbar at sqrt(s) = 2m without initial-state radiation), made apart from the script that makes the table.
+"""
+
+import hashlib
+import json
+from importlib.resources import files
+from itertools import pairwise
+
+import numpy as np
+import pytest
+from scipy.integrate import quad
+
+from scanfit.errors import PointError
+from scanfit.likelihoods.constants import ELECTRON_MASS, MUON_MASS
+from scanfit.likelihoods.gamma_dwarfs.spectra import (
+    TABLE_CHANNELS,
+    TABLE_COLUMN,
+    box_edges,
+    final_state_radiation,
+    photon_table,
+)
+
+
+@pytest.fixture(scope="module")
+def arrays():
+    with files("scanfit.likelihoods.tables").joinpath("photon_spectra.npz").open("rb") as file:
+        return dict(np.load(file))
+
+
+def weights(channel):
+    one = np.zeros(len(TABLE_CHANNELS))
+    one[TABLE_COLUMN[channel]] = 1.0
+    return one
+
+
+def counts(channel, mass, edges):
+    """Photons per annihilation between neighbouring energies."""
+    return -np.diff(photon_table().photons_above(weights(channel), mass, np.asarray(edges, dtype=float)))
+
+
+def test_the_file_is_what_the_script_wrote(arrays):
+    metadata = json.loads(str(arrays["metadata"]))
+    digest = hashlib.sha256()
+    for name in sorted(set(arrays) - {"metadata"}):
+        digest.update(name.encode())
+        digest.update(np.ascontiguousarray(arrays[name]).tobytes())
+    assert digest.hexdigest() == metadata["sha256"]
+    assert metadata["generator"] == "pythia8mc 8.317.2"
+
+
+@pytest.mark.parametrize(
+    ("name", "published", "error"),
+    [
+        # Means of hadronic Z decays as remembered from the Review of Particle Physics.
+        ("charged", 20.76, 0.16),
+        ("photons", 20.97, 1.17),
+        ("neutral_pions", 9.76, 0.26),
+        ("protons", 1.05, 0.04),
+    ],
+)
+def test_z_bosons_at_rest_decay_as_measured(arrays, name, published, error):
+    mean, simulation_error = json.loads(str(arrays["metadata"]))["z_boson_multiplicities"][name]
+    assert abs(mean - published) < 2.5 * np.hypot(error, simulation_error)
+
+
+@pytest.mark.parametrize(
+    ("channel", "mass", "fraction", "above_one"),
+    [
+        # Energy fraction in photons and their number above 1 GeV, independent simulation.
+        ("bb", 100.0, 0.277, 13.67),
+        ("bb", 1000.0, 0.281, 45.9),
+        ("WW", 100.0, 0.212, 9.95),
+        ("WW", 1000.0, 0.229, 26.2),
+        ("uu", 100.0, 0.304, 11.55),
+        ("tautau", 100.0, 0.150, 2.24),
+        ("tautau", 1000.0, 0.155, 2.60),
+        ("tt", 1000.0, 0.244, 52.7),
+    ],
+)
+def test_energy_and_number_agree_with_independent_simulation(arrays, channel, mass, fraction, above_one):
+    at = np.interp(np.log(mass), np.log(arrays[f"{channel}_mass"]), arrays[f"{channel}_energy_fraction"])
+    assert at == pytest.approx(fraction, rel=0.04)
+    assert photon_table().photons_above(weights(channel), mass, np.array([1.0]))[0] == pytest.approx(
+        above_one, rel=0.04
+    )
+
+
+def test_gluons_put_the_expected_energy_into_photons(arrays):
+    mass = arrays["gg_mass"]
+    inside = arrays["gg_energy_fraction"][(mass > 20.0) & (mass < 2000.0)]
+    assert np.all((inside > 0.27) & (inside < 0.31))  # .28-.31 in independent simulation
+
+
+@pytest.mark.parametrize(
+    ("channel", "published"),
+    [
+        ("bb", [7.16, 11.37, 8.76, 4.24, 0.648, 0.0216]),
+        ("tautau", [0.081, 0.164, 0.394, 0.838, 0.766, 0.207]),
+        ("WW", [6.42, 9.38, 6.37, 3.01, 0.548, 0.0228]),
+    ],
+)
+def test_shapes_agree_with_independent_simulation_at_100_gev(channel, published):
+    found = counts(channel, 100.0, 100.0 * np.array([0.001, 0.003, 0.01, 0.03, 0.1, 0.3, 0.6]))
+    # Events behind the published numbers: about 2000, photons independent enough for a square root.
+    error = np.sqrt(np.array(published) / 2000.0 * 2.0) + 0.03 * np.array(published)
+    assert np.all(np.abs(found - published) < 3.0 * error)
+
+
+def analytic(channel, x):
+    """Published fits, as remembered: astro-ph/9712318 and its successors, astro-ph/0407342 for taus; dN/dx."""
+    if channel == "tautau":
+        return np.maximum(x**-1.31 * (6.94 * x - 4.93 * x**2 - 0.51 * x**3) * np.exp(-4.53 * x), 0.0)
+    a, b = {"WW": (0.73, 7.76), "bb": (1.0, 10.7), "tt": (1.1, 15.1), "uu": (0.95, 6.5)}[channel]
+    return a * np.exp(-b * x) / (x**1.5 + 0.00014)
+
+
+@pytest.mark.parametrize(
+    ("channel", "mass", "ratios"),
+    [
+        # Fit over simulation in bins of x; the fits are 20-30 % low where dwarf limits are made: hence the table.
+        ("bb", 100.0, [0.98, 0.75, 0.69, 0.75, 0.75]),
+        ("bb", 1000.0, [0.72, 0.73, 0.76, 0.95, 0.64]),
+        ("WW", 100.0, [0.88, 0.79, 0.82, 1.01, 1.55]),
+        ("WW", 1000.0, [0.92, 0.84, 0.82, 0.85, 0.62]),
+        ("uu", 100.0, [1.19, 1.03, 0.90, 0.78, 0.69]),
+        ("tautau", 100.0, [1.40, 1.09, 1.00, 1.13, 1.30]),
+        ("tautau", 1000.0, [1.04, 1.03, 1.01, 1.13, 1.19]),
+        ("tt", 1000.0, [0.63, 0.76, 0.92, 1.00, 0.43]),
+    ],
+)
+def test_published_fits_stand_in_the_stated_ratio(channel, mass, ratios):
+    edges = np.array([0.003, 0.01, 0.03, 0.1, 0.3, 0.6])
+    fit = [quad(lambda x: float(analytic(channel, x)), *pair)[0] for pair in pairwise(edges)]
+    found = np.array(fit) / counts(channel, mass, mass * edges)
+    tolerance = np.array([0.06, 0.06, 0.06, 0.08, 0.25]) * np.array(ratios)
+    assert np.all(np.abs(found - ratios) < tolerance + 0.02)
+
+
+@pytest.mark.parametrize(("channel", "lepton"), [("ee", ELECTRON_MASS), ("mumu", MUON_MASS)])
+@pytest.mark.parametrize("mass", [10.0, 100.0, 1000.0, 1e5])
+def test_light_leptons_radiate_as_the_collinear_formula_says(channel, lepton, mass):
+    edges = np.array([0.001, 0.01, 0.1, 0.3, 0.6, 0.8])
+    expected = [
+        quad(lambda x: float(final_state_radiation(np.array(x), mass, lepton)), *pair)[0] for pair in pairwise(edges)
+    ]
+    # The formula is leading-logarithmic: a tenth is what it is good for.
+    assert counts(channel, mass, mass * edges) == pytest.approx(expected, rel=0.1)
+
+
+def test_masses_kept_out_of_the_table_are_interpolated(arrays):
+    """N(> x) to 3 % below x = 0.2 and 5 % up to 0.5, beyond what both simulations' own errors allow."""
+    edges = arrays["log10_x_edges"]
+    checked = 0
+    for channel, mass, photons, error in zip(
+        arrays["held_out_channel"],
+        arrays["held_out_mass"],
+        arrays["held_out_photons"],
+        arrays["held_out_error"],
+        strict=True,
+    ):
+        truth = photons[::-1].cumsum()[::-1]
+        # The table's own errors are as large as the held-out sample's; bins of one event are nearly independent.
+        spread = np.sqrt(2.0 * (error**2)[::-1].cumsum()[::-1])
+        found = photon_table().photons_above(weights(str(channel)), float(mass), float(mass) * 10.0 ** edges[:-1])
+        for low, high, tolerance in ((1e-3, 0.2, 0.03), (0.2, 0.5, 0.05)):
+            inside = (10.0 ** edges[:-1] >= low) & (10.0 ** edges[:-1] < high)
+            excess = np.abs(found - truth)[inside] - 3.0 * spread[inside]
+            assert np.all(excess < tolerance * truth[inside]), (channel, mass)
+            checked += int(inside.sum())
+    assert checked > 1000
+
+
+def test_counts_never_turn_negative_and_stop_at_the_mass():
+    energies = np.geomspace(1e-3, 1e5, 2000)
+    rng = np.random.default_rng(1)
+    for mass in np.exp(rng.uniform(np.log(3.0), np.log(1e5), 60)):
+        above = photon_table().photons_above(rng.random(len(TABLE_CHANNELS)), float(mass), energies)
+        assert np.all(np.diff(above) <= 1e-12)
+        assert np.all(above[energies >= mass] == 0.0)
+
+
+def test_closed_channels_are_dark_and_their_thresholds_are_held():
+    one = np.array([1.0])
+    table = photon_table()
+    assert table.photons_above(weights("WW"), 80.0, one)[0] == 0.0
+    assert table.photons_above(weights("WW"), 80.4, one)[0] > 5.0
+    assert table.photons_above(weights("bb"), 4.1, one)[0] == 0.0
+    # Between threshold and first simulated mass the spectrum is held in x.
+    assert table.photons_above(weights("bb"), 5.0, 5.0 * one / 10.0)[0] == pytest.approx(
+        table.photons_above(weights("bb"), 5.5, 5.5 * one / 10.0)[0]
+    )
+
+
+def test_nothing_is_extrapolated_in_mass():
+    with pytest.raises(PointError, match=r"from 3 to 100000 GeV, not for 2\.5 GeV"):
+        photon_table().photons_above(weights("tautau"), 2.5, np.array([1.0]))
+    assert photon_table().photons_above(np.zeros(len(TABLE_CHANNELS)), 2.5, np.array([1.0]))[0] == 0.0
+
+
+def test_a_box_spans_the_kinematic_range():
+    # phi of energy m at speed beta: photons from m(1-beta)/2 to m(1+beta)/2.
+    low, high = box_edges(100.0, 60.0)
+    assert (low, high) == (pytest.approx(10.0), pytest.approx(90.0))
+    with pytest.raises(ValueError, match="lighter"):
+        box_edges(100.0, 100.0)
