@@ -3,9 +3,10 @@
 The table holds N(> x), the mean number of photons per annihilation with energy above x m, for twelve final
 states on a grid of masses; `tables/make_photon_spectra.py` makes it and says how. Between its points N(> x)
 runs through a monotone cubic in ln x and a straight line in ln m, so counts in any energy range are never
-negative. Measured on masses that were kept out of the table, N(> x) is good to 2 % for 1e-3 < x < 0.2 in every
-channel (tests/reference/test_gamma_spectra.py); the last third of the energy range has few simulated photons
-and an error up to 10 %.
+negative. Measured on eighteen masses that were kept out of the table, N(> x) is off by at most 2.5 % for
+1e-5 < x < 0.1. Above, the number of simulated events is the limit: for hadrons 3 to 8 % at x = 0.2 and some tens of per
+cent at x = 0.5, where fewer than one photon in a thousand lies; for leptons 1 to 5 % at x = 0.5. More events in
+`make_photon_spectra.py` cure that. Checks: tests/reference/test_gamma_spectra.py.
 
 Between the kinematic threshold of a channel and the first simulated mass (bb: 4.18 to 5.5 GeV, heavy bosons and
 tops: 0.3 % above threshold) the spectrum of the first simulated mass is used in x. Below threshold a channel

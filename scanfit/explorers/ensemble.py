@@ -10,21 +10,25 @@ from typing import Any, ClassVar, Final
 import numpy as np
 from emcee import State
 from emcee.model import Model as MoveModel
-from emcee.moves import DEMove, DESnookerMove, StretchMove
+from emcee.moves import DEMove, StretchMove
 from pydantic import Field
 
 from scanfit.contracts import Evaluate, Exploration, Explorer, Progress
 from scanfit.errors import InputError, Problem
 from scanfit.explorers.agreement import agreement_p_values, autocorrelation_times, r_hat
+from scanfit.explorers.bridge import Evidence, bridge
 from scanfit.explorers.global_search import GlobalSearch
 from scanfit.explorers.lockstep import LockstepPool
+from scanfit.explorers.snooker import SnookerMove
 from scanfit.priors import FloatArray
 from scanfit.validation import Options
 
 _CALLS_PER_ADVANCE: Final = 4000
 _BURN_IN: Final = 0.25
+_FEWEST_STEPS: Final = 20
 _FIRST_CHECK: Final = 200
 _CHECK_GROWTH: Final = 1.15
+_BRIDGE_DRAWS: Final = 3000
 _P_VALUE_MINIMUM: Final = 1e-3
 _LIKELIHOOD: Final = "ln(likelihood)"
 
@@ -42,6 +46,8 @@ class EnsembleOptions(Options):
     """Largest rank-normalised R-hat between the ensembles with which the run may end."""
     search_generations: int = Field(default=200, ge=1)
     """Where the global search for starting places ends at the latest."""
+    evidence_points: int = Field(default=4000, ge=0)
+    """Calls spent on the evidence at the end; 0 leaves it out."""
 
 
 @dataclass
@@ -72,12 +78,13 @@ class Ensemble(Explorer):
 
     Each ensemble starts from the population of its own global search, so that a mode that one search misses is there
     in another ensemble. Walkers move by differential evolution (Statistics and Computing 16, 239 (2006)), in one step
-    of ten with the full difference of two walkers, which leads from mode to mode; by snooker steps (ibid. 18, 435
+    of five with the full difference of two walkers, which leads from mode to mode; by snooker steps (ibid. 18, 435
     (2008)); and by stretch moves (Comm. App. Math. Comp. Sci. 5, 65 (2010)). Steps that leave the cube are rejected.
 
     The first quarter of every chain is dropped as burn-in. The run ends, converged, once for every parameter and for
     the likelihood the kept chains are `autocorrelation_times` long, R-hat between ensembles is at most `r_hat`, and the
-    means of the ensembles agree within their own standard errors; or, not converged, after `steps_maximum` steps.
+    means of the ensembles agree within their own standard errors; or, not converged, after `steps_maximum` steps. The
+    evidence then comes from bridge sampling between the ensembles.
     """
 
     Options: ClassVar[type[Options]] = EnsembleOptions
@@ -91,9 +98,10 @@ class Ensemble(Explorer):
         self._ensembles: list[_Ensemble] = []
         self._checks: list[_Check] = []
         self._next_check = _FIRST_CHECK
-        self._converged = False
-        self._moves = (DEMove(), DEMove(gamma0=1.0), DESnookerMove(), StretchMove())
-        self._shares = (0.55, 0.1, 0.2, 0.15)
+        self._converged = self._ended = False
+        self._evidence: Evidence | None = None
+        self._moves = (DEMove(), DEMove(gamma0=1.0), SnookerMove(), StretchMove())
+        self._shares = (0.55, 0.2, 0.1, 0.15)
 
     def start(self, names: Sequence[str], seed: np.random.SeedSequence, evaluate: Evaluate) -> None:
         options = self._options
@@ -105,7 +113,8 @@ class Ensemble(Explorer):
         if self._walkers < 2 * self._dimension:
             rule = f"at least two walkers for each of {self._dimension} parameters are needed"
             raise InputError([Problem("walkers", rule, options.walkers)])
-        searching, moving = seed.spawn(2)
+        searching, moving, bridging = seed.spawn(3)
+        self._bridge_seeds = bridging.spawn(2)
         self._move_seeds = moving.spawn(options.ensembles)
         self._search = GlobalSearch(
             self._pool,
@@ -127,22 +136,27 @@ class Ensemble(Explorer):
         list(self._pool.map(lambda ensemble: self._move(ensemble, rounds), self._ensembles))
         self._steps += rounds
         if self._steps == self._next_check or self._steps == self._options.steps_maximum:
-            self._check()
+            self._checks.append(self._judge())
+            self._converged = not self._failures(self._checks[-1])
             self._next_check = math.ceil(_CHECK_GROWTH * self._steps)
+        if self._converged or self._steps >= self._options.steps_maximum:
+            self._evidence = self._bridge()
+            self._ended = True
         return self._progress()
 
     @property
     def finished(self) -> bool:
-        return self._converged or self._steps >= self._options.steps_maximum
+        return self._ended
 
     def result(self) -> Exploration:
-        if not self._ensembles:
-            points = np.full((1, self._dimension), 0.5)
-            verdict = "Not converged: the global search for starting places has not ended."
-            return Exploration(points, np.zeros(1), converged=False, verdict=verdict)
-        if not self._checks or self._checks[-1].steps != self._steps:
-            self._checks.append(self._judge())
-        check = self._checks[-1]
+        if self._steps < _FEWEST_STEPS:
+            points = np.concatenate([ensemble.state.coords for ensemble in self._ensembles] or [self._search.points])
+            log_weights = np.full(len(points), -math.log(len(points)))
+            verdict = "Not converged: it has not ended; these are the walkers of the global search."
+            return Exploration(points, log_weights, False, verdict, history=self._history())
+        # A look in between must not change what comes after.
+        up_to_date = bool(self._checks) and self._checks[-1].steps == self._steps
+        check = self._checks[-1] if up_to_date else self._judge()
         chains = self._kept()
         slowest = float(check.times.max())
         thin = max(1, int(slowest / 2.0)) if math.isfinite(slowest) else 1
@@ -155,6 +169,8 @@ class Ensemble(Explorer):
             log_weights=np.full(len(points), -math.log(len(points))),
             converged=self._converged,
             verdict=self._verdict(check),
+            log_evidence=None if self._evidence is None else self._evidence.log_evidence,
+            log_evidence_error=None if self._evidence is None else self._evidence.error,
             diagnostics={
                 "ensembles": self._options.ensembles,
                 "walkers": self._walkers,
@@ -170,12 +186,7 @@ class Ensemble(Explorer):
                 "ensemble_means": [self._by_name(means) for means in chains.mean(axis=(1, 2))],
                 "search_generations": self._search.generations,
             },
-            history={
-                "calls": np.array([float(check.calls) for check in self._checks]),
-                "autocorrelation_time": np.array([check.times for check in self._checks]),
-                "chain_length": np.array([check.kept_steps / check.times.max() for check in self._checks]),
-                "r_hat": np.array([check.r_hat for check in self._checks]),
-            },
+            history=self._history(),
         )
 
     def _counted(self, unit_points: FloatArray) -> FloatArray:
@@ -224,10 +235,28 @@ class Ensemble(Explorer):
             p_values=agreement_p_values(chains),
         )
 
-    def _check(self) -> None:
-        check = self._judge()
-        self._checks.append(check)
-        self._converged = not self._failures(check)
+    def _bridge(self) -> Evidence | None:
+        """The evidence, from one half of the ensembles over the other and the reverse."""
+        points, slowest = self._options.evidence_points // 2, float(self._checks[-1].times.max())
+        if points == 0 or not math.isfinite(slowest):
+            return None
+        chains = self._kept()
+        halves, found = (chains[::2], chains[1::2]), []
+        for number, seed in enumerate(self._bridge_seeds):
+            random = np.random.default_rng(seed)
+            fitted, draws = (half.reshape(-1, self._dimension + 1) for half in (halves[number], halves[1 - number]))
+            independent = len(draws) / slowest
+            fitted = fitted[random.permutation(len(fitted))[:_BRIDGE_DRAWS], :-1]
+            draws = draws[random.permutation(len(draws))[:_BRIDGE_DRAWS]]
+            independent = min(independent, float(len(draws)))
+            found.append(
+                bridge(fitted, draws[:, :-1], draws[:, -1], independent, self._pool.log_likelihood_many, points, random)
+            )
+        first, second = found
+        return Evidence(
+            0.5 * (first.log_evidence + second.log_evidence),
+            max(0.5 * math.hypot(first.error, second.error), 0.5 * abs(first.log_evidence - second.log_evidence)),
+        )
 
     def _failures(self, check: _Check) -> list[str]:
         """Which criteria do not hold, and for which parameter."""
@@ -241,8 +270,18 @@ class Ensemble(Explorer):
             failed.append(f"the ensembles disagree on {self._worst(-check.p_values)}")
         return failed
 
-    def _by_name(self, values: FloatArray) -> dict[str, float]:
-        return dict(zip(self._names, values.tolist(), strict=True))
+    def _history(self) -> dict[str, FloatArray]:
+        return {
+            "calls": np.array([float(check.calls) for check in self._checks]),
+            "autocorrelation_time": np.array([check.times for check in self._checks]),
+            "chain_length": np.array([check.kept_steps / check.times.max() for check in self._checks]),
+            "r_hat": np.array([check.r_hat for check in self._checks]),
+        }
+
+    def _by_name(self, values: FloatArray) -> dict[str, float | None]:
+        """Numbers with the names of the parameters; None where there is none."""
+        finite = (value if math.isfinite(value) else None for value in values.tolist())
+        return dict(zip(self._names, finite, strict=True))
 
     def _worst(self, values: FloatArray) -> str:
         return self._names[int(np.argmax(values))]

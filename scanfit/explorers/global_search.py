@@ -77,6 +77,11 @@ class GlobalSearch:
         """Highest log-likelihood found."""
         return float(max(search.log_likelihoods.max() for search in self._searches))
 
+    @property
+    def points(self) -> FloatArray:
+        """All populations, shape ``(searches * size, dimension)``."""
+        return np.concatenate([search.points for search in self._searches])
+
     def advance(self, generations: int) -> None:
         """Evolve all populations by at most so many generations."""
         for _ in range(generations):
@@ -106,8 +111,7 @@ class GlobalSearch:
                 f"ensemble: none of {tried} points tried by the global search has a likelihood above zero; "
                 "narrow the priors or look at one such point"
             )
-        points = np.concatenate([search.points for search in self._searches])
-        good = points[np.concatenate([search.log_likelihoods for search in self._searches]) >= best - self.depth]
+        good = self.points[np.concatenate([search.log_likelihoods for search in self._searches]) >= best - self.depth]
         list(self._pool.map(lambda search: self._recruit(search, good, best - self.depth), self._searches))
         return [(search.points, search.log_likelihoods) for search in self._searches]
 

@@ -40,12 +40,12 @@ class LockstepPool:
         """Log-likelihood of one point, shape ``(dimension,)``; outside `map` it is a batch of one."""
         return float(self.log_likelihood_many(np.asarray(point)[np.newaxis])[0])
 
-    def log_likelihood_many(self, points: FloatArray) -> FloatArray:
+    def log_likelihood_many(self, unit_points: FloatArray) -> FloatArray:
         """Log-likelihoods of several points, shape ``(n, dimension)`` to ``(n,)``."""
         member = getcurrent()
         if member not in self._members:
-            return self._evaluate(points)
-        answer: FloatArray = member.parent.switch(points)  # type: ignore[union-attr]  # a member has a parent
+            return self._evaluate(unit_points)
+        answer: FloatArray = member.parent.switch(unit_points)  # type: ignore[union-attr]  # a member has a parent
         return answer
 
     def map(self, function: Callable[[ArgumentT], ResultT], arguments: Iterable[ArgumentT]) -> Iterator[ResultT]:

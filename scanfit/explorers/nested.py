@@ -23,8 +23,9 @@ from scanfit.validation import Options
 
 _CALLS_PER_ADVANCE: Final = 2000
 _ITERATIONS_PER_ADVANCE: Final = 500
-_ITERATIONS_PER_LOOK: Final = 50
-_COST_MAXIMUM: Final = 3.0
+_ITERATIONS_PER_RECORD: Final = 50
+_ITERATIONS_PER_LOOK: Final = 200
+_COST_MAXIMUM: Final = 5.0
 """Calls of uniform draws for one new live point, in lengths of a random walk, that "auto" accepts."""
 _LIKELIHOOD_ZERO: Final = -1e299
 """dynesty stands in -1e300 for the log of a likelihood of zero."""
@@ -247,7 +248,7 @@ class Nested(Explorer):
     def _record(self, step: Any) -> None:
         self._step = step
         self._remaining = float(np.logaddexp(0.0, self._current.live_logl.max() + step.logvol - step.logz))
-        if self._iterations % _ITERATIONS_PER_LOOK == 0:
+        if self._iterations % _ITERATIONS_PER_RECORD == 0:
             self._records.append((self._calls, step.logvol, step.logz, step.loglstar))
 
     def _settle_plateau(self) -> None:
@@ -316,7 +317,7 @@ class Nested(Explorer):
     def _history(self) -> dict[str, FloatArray]:
         """Curves over the first run."""
         records = np.array(self._records).reshape(-1, 4)
-        iterations = _ITERATIONS_PER_LOOK * np.arange(1, len(records) + 1)
+        iterations = _ITERATIONS_PER_RECORD * np.arange(1, len(records) + 1)
         return {
             "calls": records[:, 0],
             "log_prior_volume": records[:, 1],

@@ -19,15 +19,17 @@ DEATHS_ALLOWED = 3
 _SHORTEST_TASK = 1e-3
 """Seconds; below, the way there and back (0.1 ms) would count."""
 _LONGEST_TASK = 4096
-"""Points; a pipe holds 65536 ticks."""
+"""Points; a pipe holds 65536 ticks, enough for two tasks."""
+_LARGEST_RESERVE = 32_768
+"""Bytes, which fit the line's buffer: else we could wait for a worker to read that waits for us to read."""
 _CHECKS_PER_LIMIT = 10
 
 
 class Assignment:
     """The state of a batch in work.
 
-    Tasks get smaller towards the end, so that workers finish together although points differ in cost. That decides who
-    does what, never what comes out.
+    Tasks get smaller towards the end, so that workers finish together although points differ in cost; each worker has
+    a task in reserve, so that it need not wait for us. That decides who does what, never what comes out.
 
     Parameters
     ----------
@@ -57,7 +59,7 @@ class Assignment:
         self._crew = crew
         self._points = points
         self._limit = time_limit
-        self._waiting = deque([(0, len(points))])
+        self._waiting = deque([range(len(points))])
         self._deaths: Counter[int] = Counter()
         self._checked = time.monotonic()
 
@@ -65,29 +67,30 @@ class Assignment:
         """Work until every point has an answer or is given up."""
         interval = None if self._limit is None else self._limit / _CHECKS_PER_LIMIT
         while True:
-            for worker in list(self._crew.workers):
-                if worker.ready and not worker.busy and self._waiting:
-                    self._give_task(worker)
-            if not self._waiting and not any(worker.busy for worker in self._crew.workers):
+            for reserve in (0, 1):
+                for worker in list(self._crew.workers):
+                    if worker.ready and len(worker.tasks) == reserve and self._waiting:
+                        self._give_task(worker, in_reserve=reserve > 0)
+            if not self._waiting and not any(worker.tasks for worker in self._crew.workers):
                 return
-            lines = [worker.line for worker in self._crew.workers]
-            heard = wait(lines, interval)
+            heard = wait([worker.line for worker in self._crew.workers], interval)
             for worker in [worker for worker in self._crew.workers if worker.line in heard]:
                 self._listen(worker)
             if self._limit is not None:
                 self._watch(self._limit)
 
-    def _give_task(self, worker: Worker) -> None:
-        first, end = self._waiting.popleft()
-        left = end - first + sum(end - first for first, end in self._waiting)
-        share = math.ceil(left / (2 * len(self._crew.workers)))
-        cost = self.seconds_per_point
-        shortest = math.ceil(_SHORTEST_TASK / cost) if cost > 0.0 else 1
-        stop = min(end, first + min(max(share, shortest), _LONGEST_TASK))
-        if stop < end:
-            self._waiting.appendleft((stop, end))
+    def _give_task(self, worker: Worker, in_reserve: bool) -> None:
+        places = self._waiting[0]
+        share = math.ceil(sum(map(len, self._waiting)) / (2 * len(self._crew.workers)))
+        shortest = math.ceil(_SHORTEST_TASK / self.seconds_per_point) if self.seconds_per_point > 0.0 else 1
+        size = min(max(share, shortest), _LONGEST_TASK)
+        points = self._points[places.start : places[:size].stop]
+        if in_reserve and points.nbytes > _LARGEST_RESERVE:
+            return
+        self._waiting.popleft()
+        self._do_again(places[size:])
         try:
-            worker.send(first, self._points[first:stop])
+            worker.send(places[:size], points)
         except DEAD:
             self._bury(worker)
 
@@ -96,31 +99,28 @@ class Assignment:
             if not worker.ready:
                 self._crew.greet(worker)
                 return
-            first, count = worker.first, worker.end - worker.first
-            batch, seconds = worker.receive()
+            places, batch, seconds = worker.answer()
         except DEAD:
             self._bury(worker)
             return
         self._crew.praise()
-        self.answers[first] = batch
-        self.seconds_per_point = seconds / count
+        self.answers[places.start] = batch
+        self.seconds_per_point = seconds / len(places)
 
     def _bury(self, worker: Worker) -> None:
         """Replace a dead worker, and have its points done again."""
         worker.count_ticks()
-        first, end, suspect = worker.first, worker.end, worker.suspect
+        suspect = worker.suspect
         ending = self._crew.replace(worker)
+        self._take_back(worker, suspect)
         if suspect is None:
-            self._do_again(first, end)
             return
         self._deaths[suspect] += 1
-        self._do_again(suspect + 1, end)
         if self._deaths[suspect] < DEATHS_ALLOWED:
-            self._do_again(suspect, suspect + 1)
+            self._do_again(range(suspect, suspect + 1))
         else:
             message = f"took down {DEATHS_ALLOWED} worker processes, the last {ending}"
             self.losses[suspect] = Loss(Status.FAILED, message)
-        self._do_again(first, suspect)
 
     def _watch(self, limit: float) -> None:
         """End workers that have been at one point for too long."""
@@ -130,25 +130,28 @@ class Assignment:
         if passed < interval:
             return
         self._checked = now
-        for worker in [worker for worker in self._crew.workers if worker.busy]:
+        for worker in [worker for worker in self._crew.workers if worker.tasks]:
             if worker.count_ticks():
                 worker.silent = 0.0
                 continue
             # When this process was stopped (a suspended job), so were the workers: that time does not count.
             worker.silent += min(passed, 2.0 * interval)
             if worker.silent > limit:
-                self._give_up(worker, limit)
+                suspect = worker.suspect
+                self._crew.replace(worker)
+                self._take_back(worker, suspect)
+                if suspect is not None:
+                    self.losses[suspect] = Loss(Status.TIMED_OUT, f"took longer than {limit:g} s")
 
-    def _give_up(self, worker: Worker, limit: float) -> None:
-        first, end, suspect = worker.first, worker.end, worker.suspect
-        self._crew.replace(worker)
-        if suspect is None:
-            self._do_again(first, end)
-            return
-        self._do_again(suspect + 1, end)
-        self._do_again(first, suspect)
-        self.losses[suspect] = Loss(Status.TIMED_OUT, f"took longer than {limit:g} s")
+    def _take_back(self, worker: Worker, suspect: int | None) -> None:
+        """Put the points of a worker that is gone back among the waiting, except the one that it was at."""
+        for places in reversed(worker.tasks):
+            if suspect is None or suspect not in places:
+                self._do_again(places)
+            else:
+                self._do_again(range(suspect + 1, places.stop))
+                self._do_again(range(places.start, suspect))
 
-    def _do_again(self, first: int, end: int) -> None:
-        if first < end:
-            self._waiting.appendleft((first, end))
+    def _do_again(self, places: range) -> None:
+        if places:
+            self._waiting.appendleft(places)

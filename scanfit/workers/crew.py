@@ -41,7 +41,7 @@ class Crew:
         ScanfitError
             If it could not build the posterior.
         """
-        complaint = worker.receive()
+        complaint = worker.greeting()
         if complaint is not None:
             raise ScanfitError(f"a worker process could not build the model: {complaint}")
         worker.ready = True

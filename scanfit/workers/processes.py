@@ -92,7 +92,7 @@ class ProcessWorkers(Workers):
             raise
         except BaseException:
             # An interrupt. What busy workers still send would be taken for answers to the next batch.
-            for worker in [worker for worker in self._crew.workers if worker.busy]:
+            for worker in [worker for worker in self._crew.workers if worker.tasks]:
                 self._crew.replace(worker)
             raise
         self._seconds_per_point = assignment.seconds_per_point

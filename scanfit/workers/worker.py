@@ -4,12 +4,14 @@ from __future__ import annotations
 
 import os
 import signal
+from collections import deque
 from contextlib import suppress
 from multiprocessing import current_process
 from typing import Any
 
 from joblib.externals.loky.backend.context import get_context
 
+from scanfit.posterior import Batch
 from scanfit.priors import FloatArray
 from scanfit.workers.child import THREADS, serve
 
@@ -20,12 +22,25 @@ _PATIENCE = 2.0
 
 
 class Worker:
-    """A process, the line to it, and the points ``first`` to ``end - 1`` that it is working on.
+    """A process, the line to it, and the tasks that it has.
 
     Parameters
     ----------
     build : bytes
         The pickled function that builds the posterior.
+
+    Attributes
+    ----------
+    ready : bool
+        Whether it has built the posterior.
+    tasks : deque of range
+        Places of the points that it was given and has not answered, in order.
+    begun : int
+        How many of them it has begun, as far as known.
+    silent : float
+        Seconds for which it was watched at the same point.
+    ending : str
+        In words, how it ended.
     """
 
     def __init__(self, build: bytes) -> None:
@@ -39,32 +54,39 @@ class Worker:
         far_ticks.close()
         self.pid: int = self._process.pid
         self.ready = False
-        self.first = self.end = self.begun = 0
+        self.tasks: deque[range] = deque()
+        self.begun = 0
         self.silent = 0.0
         self.ending = ""
 
     @property
-    def busy(self) -> bool:
-        """Whether an answer is due."""
-        return self.end > self.first
-
-    @property
     def suspect(self) -> int | None:
-        """The point that it is working on; None before the first."""
-        return self.first + self.begun - 1 if self.begun else None
+        """Place of the point that it is working on; None before the first."""
+        begun = self.begun
+        for places in self.tasks:
+            if begun <= len(places):
+                return places[begun - 1] if begun else None
+            begun -= len(places)
+        return None
 
-    def send(self, first: int, points: FloatArray) -> None:
-        """Give it points to evaluate, the first of which is number `first` of the batch."""
-        self.first, self.end = first, first + len(points)
-        self.begun, self.silent = 0, 0.0
+    def send(self, places: range, points: FloatArray) -> None:
+        """Give it a task: these points, which have these places in the batch."""
+        self.tasks.append(places)
         self.line.send(points)
 
-    def receive(self) -> Any:
-        """Take the message that has arrived."""
-        message = self.line.recv()
+    def greeting(self) -> str | None:
+        """Take its first message: None, or why it cannot work."""
+        complaint: str | None = self.line.recv()
+        return complaint
+
+    def answer(self) -> tuple[range, Batch, float]:
+        """Take the answer to its first task: places, rows, and the seconds that it took."""
+        batch, seconds = self.line.recv()
         self.count_ticks()
-        self.first = self.end = self.begun = 0
-        return message
+        places = self.tasks.popleft()
+        self.begun -= len(places)
+        self.silent = 0.0
+        return places, batch, seconds
 
     def count_ticks(self) -> bool:
         """Bring `begun` up to date; return whether there was anything new."""
@@ -86,7 +108,7 @@ class Worker:
         """End it, wait until it has ended, and note how."""
         if self._process is None:
             return
-        if not self.busy and self.line.closed:
+        if not self.tasks and self.line.closed:
             self._process.join(_PATIENCE)
         if self._process.exitcode is None:  # not reaped, so the number is still its own
             os.kill(self.pid, signal.SIGKILL)
