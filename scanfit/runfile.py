@@ -197,7 +197,7 @@ def _explorers(table: Mapping[str, Any], folder: Path) -> tuple[PlannedExplorer,
         raise InputError([Problem("explore.use", "must be a name or a list of names", used, choices)])
     findings = _Findings()
     if len(set(names)) < len(names):
-        findings.problems.append(Problem("explore.use", "names an explorer twice", names))
+        raise InputError([Problem("explore.use", "names an explorer twice", names)])
     planned = []
     for name in names:
         with findings.collect():

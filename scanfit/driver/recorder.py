@@ -108,7 +108,7 @@ class Recorder:
             If a stop rule holds or a signal has arrived.
         """
         self._interruption.check()
-        points = self._space.from_unit(unit_points)
+        points = self._space.from_unit(unit_points) + 0.0  # no negative zero: the archive compares bytes
         log_likelihood, known = self._archive.lookup(points)
         self._answered += int(known.sum())
         if not known.all():

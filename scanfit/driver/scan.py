@@ -24,7 +24,7 @@ from scanfit.posterior import Posterior
 from scanfit.results import EXPLORERS, FIGURES, POINTS, POSTERIOR, PROFILE, REPORT, SUMMARY
 from scanfit.runfile import HARMLESS_KEYS, PlannedExplorer, RunFile, load_posterior
 from scanfit.store.archive import PointsArchive
-from scanfit.store.atomic import write_json
+from scanfit.store.atomic import UNFINISHED, write_json
 from scanfit.store.failures import FailureLog
 from scanfit.store.lock import RunLock
 from scanfit.store.manifest import MANIFEST, Manifest
@@ -79,7 +79,11 @@ def run(
     reporter = reporter or Silent()
     _make_folder(out)
     with ExitStack() as stack:
-        strangers = [child.name for child in out.iterdir()]
+        strangers = [
+            child.name
+            for child in out.iterdir()
+            if child.name not in RunLock.FILES and not child.name.endswith(UNFINISHED)
+        ]
         lock = stack.enter_context(RunLock(out))
         for notice in lock.notices:
             reporter.note(notice)
@@ -87,7 +91,8 @@ def run(
             _clear(out)
         elif strangers and not (out / MANIFEST).is_file():
             raise RunFolderError(f"{out} is not empty and holds no scanfit run; choose another folder with --out")
-        manifest = Manifest.of_run(run_file.data, HARMLESS_KEYS, run_file.data_files, _sources(run_file))
+        meaning = {**run_file.data, "order of terms": list(run_file.posterior.terms)}  # it is that of the columns
+        manifest = Manifest.of_run(meaning, HARMLESS_KEYS, run_file.data_files, _sources(run_file))
         _check_identity(out, manifest)
         finished = _finished_summary(out, run_file)
         if finished is not None:
@@ -97,6 +102,7 @@ def run(
         check_predictions(run_file.posterior)
         manifest.write(out / MANIFEST)
         archive = PointsArchive(out / POINTS, run_file.posterior.columns, run_file.posterior.space.dimension)
+        archive.lookup(np.empty((0, run_file.posterior.space.dimension)))  # reads every part, and finds damage
         for notice in archive.notices:
             reporter.note(notice)
         if len(archive):
@@ -126,6 +132,7 @@ def run(
             raise
         finally:
             reporter.close()
+        archive.compact()
         summary = write_summary(out, run_file, archive, explorations)
         _write_status(out, "finished", recorder.tally())
     draw(out)

@@ -37,7 +37,7 @@ def save_exploration(
     """
     home = folder / EXPLORERS / name
     home.mkdir(parents=True, exist_ok=True)
-    points = posterior.space.from_unit(exploration.unit_points)
+    points = posterior.space.from_unit(exploration.unit_points) + 0.0  # as the recorder archives them
     frame = archive.take(archive.row_numbers(points))
     frame["weight"] = np.exp(exploration.log_weights - np.logaddexp.reduce(exploration.log_weights))
     write_parquet(home / POSTERIOR, frame)

@@ -37,7 +37,7 @@ class EnsembleOptions(Options):
     """Options of ``use = "ensemble"``."""
 
     ensembles: int = Field(default=4, ge=2)
-    walkers: int | None = Field(default=None, ge=8, multiple_of=4)
+    walkers: int | None = Field(default=None, ge=8, multiple_of=2)
     """In each ensemble; by default six for each parameter, at least 24."""
     steps_maximum: int = Field(default=20_000, ge=100)
     autocorrelation_times: float = Field(default=50.0, ge=10.0)

@@ -2,6 +2,7 @@
 
 The rank of a new live point's likelihood among the other live points is uniform if it was drawn uniformly from the
 region above the threshold. A proposal that misses part of the region, or prefers part of it, bends the distribution.
+Passing is no proof: a proposal that goes wrong by the same proportion at every threshold leaves the ranks uniform.
 """
 
 from __future__ import annotations

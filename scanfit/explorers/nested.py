@@ -25,7 +25,7 @@ _CALLS_PER_ADVANCE: Final = 2000
 _ITERATIONS_PER_ADVANCE: Final = 500
 _ITERATIONS_PER_RECORD: Final = 50
 _ITERATIONS_PER_LOOK: Final = 200
-_COST_MAXIMUM: Final = 5.0
+_COST_MAXIMUM: Final = 10.0
 """Calls of uniform draws for one new live point, in lengths of a random walk, that "auto" accepts."""
 _LIKELIHOOD_ZERO: Final = -1e299
 """dynesty stands in -1e300 for the log of a likelihood of zero."""

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import json
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from importlib.metadata import EntryPoint, entry_points
 
 import numpy as np
@@ -25,10 +25,16 @@ def log_likelihood(points: np.ndarray) -> np.ndarray:
 class Evaluation:
     """Counts batches, keeps every point and can stop after some number of calls, as a signal would."""
 
-    def __init__(self, split: int = 0, stop_after: float = np.inf) -> None:
+    def __init__(
+        self,
+        split: int = 0,
+        stop_after: float = np.inf,
+        log_likelihood: Callable[[np.ndarray], np.ndarray] = log_likelihood,
+    ) -> None:
         self.points: list[np.ndarray] = []
         self.calls = 0
         self._split = split
+        self._log_likelihood = log_likelihood
         self._stop_after = stop_after
 
     def __call__(self, unit_points: np.ndarray) -> np.ndarray:
@@ -43,7 +49,7 @@ class Evaluation:
         self.points.extend(unit_points.copy())
         width = self._split or len(unit_points)
         parts = [unit_points[first : first + width] for first in range(0, len(unit_points), width)]
-        return np.concatenate([log_likelihood(part) for part in parts])
+        return np.concatenate([self._log_likelihood(part) for part in parts])
 
 
 def registered() -> Iterator[EntryPoint]:
@@ -159,19 +165,13 @@ def test_a_stop_passes_through_quietly_and_a_replay_makes_the_same_calls(
 
 
 def test_a_cube_without_likelihood_ends_with_a_reason(kind: type[Explorer]) -> None:
-    explorer = kind(quick(kind))
-    explorer.start(NAMES, np.random.SeedSequence(1), lambda unit_points: np.full(len(unit_points), -np.inf))
+    nothing = Evaluation(log_likelihood=lambda points: np.full(len(points), -np.inf))
     with pytest.raises(ScanStopped, match="likelihood above zero"):
-        while not explorer.finished:
-            explorer.advance()
+        run(kind, nothing)
 
 
 def test_a_constant_likelihood_gives_the_prior_back(kind: type[Explorer]) -> None:
-    explorer = kind(quick(kind))
-    explorer.start(NAMES, np.random.SeedSequence(1), lambda unit_points: np.full(len(unit_points), -7.0))
-    while not explorer.finished:
-        explorer.advance()
-    found = explorer.result()
+    found = run(kind, Evaluation(log_likelihood=lambda points: np.full(len(points), -7.0)))
     mean = np.exp(found.log_weights) @ found.unit_points
     assert mean == pytest.approx([0.5, 0.5, 0.5], abs=0.15)
     if found.log_evidence is not None and found.log_evidence_error is not None:
