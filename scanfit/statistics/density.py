@@ -1,9 +1,10 @@
 """Weighted density estimates in one and two dimensions.
 
-A histogram on a fine grid is smoothed with a Gaussian kernel that is reflected at the grid's ends, so that a density
-cut off by the prior is not depleted there. The width of the kernel is found by least-squares cross-validation
-(Rudemo, Scand. J. Statist. 9 (1982) 65; Bowman, Biometrika 71 (1984) 353): a rule of thumb would smear the thin bands
-and separate modes of which dark-matter posteriors are made.
+Points on a fine grid are smoothed with kernels whose width and shape follow the points around them (`kernels`): one
+width for all would either break broad parts of a dark-matter posterior into speckles or smear its thin bands. Kernels
+are reflected at the grid's ends, so that a density cut off by the prior is not depleted there. How many points shape
+a kernel, and how wide it is, is found by likelihood cross-validation (Habbema, Hermans and van den Broek, COMPSTAT
+(1974) 101; Duin, IEEE Trans. Comput. C-25 (1976) 1175).
 """
 
 from __future__ import annotations
@@ -14,24 +15,32 @@ from typing import Final
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.ndimage import gaussian_filter
 
 from scanfit.priors import FloatArray
+from scanfit.statistics.kernels import Cells, Windows, smooth
 
 CELLS: Final = {1: 1024, 2: 256}
 """Cells along each axis, by dimension."""
 
-_TRIAL_WIDTHS: Final = np.geomspace(0.05, 1.15, 13)
-"""Kernel widths tried, in units of the rule of thumb for a normal density."""
-_NARROWEST: Final = 0.6
-"""Narrowest kernel in cells; a narrower one would show the grid."""
-_SLACK: Final = {1: 0.003, 2: 0.04}
-"""The smoothest kernel is taken whose score lies within this share of the best, by dimension: the minimum is noisy.
-Tried on normal and bimodal samples (1-d: the largest without bias beyond the scatter) and on thin bands (2-d)."""
+_TRIALS: Final = ((3.0, 0.85), (1.0, 0.75), (0.3, 0.65), (0.1, 0.55))
+"""Kernels tried, smoothest first: the number of points that shape them, in units of size^(4 / (4 + d)), which balances
+bias and scatter, and their width in units of the spread of those points."""
+_JUDGES: Final = 1.0
+"""Number of points around a kernel that judge it, in the same units."""
+_SHARED: Final = 0.2
+_CONFIDENCE: Final = 2.0
+"""Standard errors by which a sharper kernel must be better than the smoothest."""
+_BACKGROUND: Final = 0.01
+"""Share of a flat density mixed in while scoring, lest one stray point set the width for all."""
 _ATOM: Final = 0.05
 """Share of the weight on one value from which on it is not smoothed."""
 _STRAY_WEIGHT: Final = 1e-5
 """Share of the weight at each end that does not stretch the grid."""
+_NEGLIGIBLE: Final = 1e-10
+"""Share of the largest weight below which a point is left out."""
+_CUT_OFF: Final = 0.3
+"""A density whose last percent takes up less than this share of the nine before it is cut off there (0.11 for a flat
+density, 0.46 for one that falls linearly to zero, 0.7 and more for normal and exponential tails)."""
 
 
 @dataclass(frozen=True)
@@ -47,7 +56,7 @@ class Density:
     height : ndarray, same shape
         Smoothed probability density.
     bandwidth : tuple of float
-        Standard deviation of the kernel along each axis.
+        Median standard deviation of the kernels along each axis.
     effective_size : float
         Number of independent points that the weights are worth.
     """
@@ -90,15 +99,30 @@ def weighted_quantile(values: FloatArray, weights: FloatArray, probability: Floa
 
 
 def sample_range(values: FloatArray, weights: FloatArray, low: float, high: float) -> tuple[float, float]:
-    """Range that the points fill, less stray points without weight; ends at a bound that the points nearly touch.
+    """Range of a density: up to a bound that the points nearly touch, or to an edge where they are cut off, or else
+    with room for the kernels.
 
-    Reflecting the kernel where the points end, and not only at a bound of the prior, treats quantities rightly that
-    have an edge of their own (a fraction that cannot exceed one); where a density dies out smoothly it changes
-    nothing.
+    Stray points without weight do not stretch it. The grid's ends reflect kernels, so that quantities are treated
+    rightly that have an edge of their own (a fraction that cannot exceed one); where a density dies out, the range
+    goes on far enough for the reflection to change nothing.
+
+    Parameters
+    ----------
+    values, weights : ndarray, shape (n,)
+        Points on the axis' scale.
+    low, high : float
+        Bounds of the prior, infinite where there are none.
     """
-    first, last = weighted_quantile(values, weights, np.array([_STRAY_WEIGHT, 1.0 - _STRAY_WEIGHT]))
-    near = 0.01 * (last - first)
-    return (low if first - low < near else float(first)), (high if high - last < near else float(last))
+    shares = np.array([_STRAY_WEIGHT, 0.01, 0.1, 0.9, 0.99, 1.0 - _STRAY_WEIGHT])
+    first, one, ten, ninety, ninety_nine, last = weighted_quantile(values, weights, shares).tolist()
+    near, room = 0.01 * (last - first), 0.08 * (last - first)
+    if first - low < near:
+        start = low
+    else:
+        start = first if one - first < _CUT_OFF * (ten - one) else max(low, first - room)
+    if high - last < near:
+        return start, high
+    return start, last if last - ninety_nine < _CUT_OFF * (ninety_nine - ninety) else min(high, last + room)
 
 
 def estimate(
@@ -121,63 +145,85 @@ def estimate(
     -------
     Density
         Of unit mass. A single value that holds much of the weight (a fraction cut at one) stays a spike of one cell.
-        For a smooth density the kernel adds its variance to that of the density (a few per cent in width at a few
-        thousand effective points); `credible` therefore counts weight in the unsmoothed cells.
+        Kernels broaden a smooth density (by some per cent at a few thousand effective points); `credible` therefore
+        counts weight in the unsmoothed cells.
     """
     dimension = values.shape[1]
     cells = cells or CELLS[dimension]
     edges = tuple(np.linspace(low, high, cells + 1) for low, high in ranges)
     places = [(values[:, k] - low) * (cells / (high - low)) for k, (low, high) in enumerate(ranges)]
-    inside = (weights > 0.0) & np.logical_and.reduce([(place >= -1e-9) & (place <= cells + 1e-9) for place in places])
-    kept = weights[inside] / weights[inside].sum()
-    index = np.ravel_multi_index(
-        [np.clip(place[inside].astype(np.intp), 0, cells - 1) for place in places], (cells,) * dimension
+    inside = (weights > _NEGLIGIBLE * weights.max()) & np.logical_and.reduce([(place >= -1e-9) & (place <= cells + 1e-9) for place in places])
+    points, kept = _distinct(np.column_stack([place[inside] for place in places]), weights[inside])
+    size = effective_size(kept)
+    atoms = _in_atom(points, kept)
+    x, y = points[:, 0], points[:, 1] if dimension == 2 else np.full(len(points), 0.5)
+    shape = (cells, cells if dimension == 2 else 1)
+    fine = Cells.of(x, y, np.where(atoms, 0.0, kept), shape)
+    smoothed, spread = _cross_validated(fine, x, y, np.where(atoms, 0.0, kept), size)
+    steps = [float(edge[1] - edge[0]) for edge in edges]
+    every = Cells.of(x, y, kept, shape).mass
+    return Density(
+        edges,
+        every.reshape((cells,) * dimension),
+        (smoothed + every - fine.mass).reshape((cells,) * dimension) / np.prod(steps),
+        tuple(float(width * step) for width, step in zip(spread, steps, strict=False)),
+        size,
     )
-    mass = np.bincount(index, kept, minlength=cells**dimension).reshape((cells,) * dimension)
-    size = effective_size(_without_repeats(values[inside], kept))
-    rule_of_thumb = [
-        _spread(values[inside, k], kept) * size ** (-1.0 / (dimension + 4)) / (edge[1] - edge[0])
-        for k, edge in enumerate(edges)
-    ]
-    cell_size = float(np.prod([edge[1] - edge[0] for edge in edges]))
-    atoms = np.bincount(index, np.where(_in_atom(values[inside], kept), kept, 0.0), minlength=mass.size)
-    atoms = atoms.reshape(mass.shape)
-    width, smooth = _cross_validated(mass - atoms, rule_of_thumb, size)
-    smooth += atoms
-    bandwidth = tuple(float(w * (edge[1] - edge[0])) for w, edge in zip(width, edges, strict=True))
-    return Density(edges, mass, smooth / cell_size, bandwidth, size)
 
 
-def _cross_validated(mass: FloatArray, rule_of_thumb: Sequence[float], size: float) -> tuple[FloatArray, FloatArray]:
-    """Kernel width in cells along each axis, and the cells smoothed with it."""
-    if mass.sum() > 0.0:
-        mass, total = mass / mass.sum(), float(mass.sum())
-    else:
-        total = 0.0
-    trials: list[tuple[float, FloatArray]] = []
-    for factor in _TRIAL_WIDTHS:
-        width = np.maximum(factor * np.asarray(rule_of_thumb), _NARROWEST)
-        smooth = gaussian_filter(mass, width, mode="reflect")
-        at_zero = float(np.prod([_central_weight(w) for w in width]))
-        left_out = (float((mass * smooth).sum()) - at_zero / size) / (1.0 - 1.0 / size) if size > 1.0 else 0.0
-        trials.append((float(np.square(smooth).sum()) - 2.0 * left_out, width))
-    best = min(score for score, _ in trials)
-    chosen = [width for score, width in trials if score <= best + _SLACK[mass.ndim] * abs(best)][-1]
-    return chosen, total * gaussian_filter(mass, chosen, mode="reflect")
+def _cross_validated(
+    fine: Cells, x: FloatArray, y: FloatArray, weights: FloatArray, size: float
+) -> tuple[FloatArray, FloatArray]:
+    """Smoothed mass of each cell, and the median kernel width along x and y in cells.
 
-
-def _central_weight(width: float) -> float:
-    offsets = np.arange(-int(4.0 * width + 0.5), int(4.0 * width + 0.5) + 1)
-    return float(1.0 / np.exp(-0.5 * np.square(offsets / width)).sum())
+    The search works on cells of twice the size, which costs little. Of the trials whose score cannot be told from the
+    best by more than its standard error, the smoothest is taken (Breiman, Friedman, Olshen and Stone, Classification
+    and Regression Trees (1984), section 3.4.3).
+    """
+    if not fine.mass.any():
+        return np.zeros(fine.shape), np.zeros(2)
+    dimension = 1 if fine.shape[1] == 1 else 2
+    shape = (fine.shape[0] // 2, max(fine.shape[1] // 2, 1))
+    halves = (0.5, 0.5 if dimension == 2 else 1.0)
+    coarse = Cells.of(x * halves[0], y * halves[1], weights, shape)
+    power = 1.0 / (dimension + 4)
+    rule_of_thumb = [_spread(place, weights) * half * size**-power for place, half in zip((x, y), halves, strict=True)]
+    windows = Windows(coarse, rule_of_thumb)
+    filled = np.flatnonzero(coarse.mass)
+    mass, squares = coarse.mass.ravel()[filled], coarse.squares.ravel()[filled]
+    flat = coarse.mass.sum() / coarse.mass.size
+    reflect = (True, dimension == 2)
+    unit = size ** (4.0 * power)
+    shapes, scores = [], []
+    for count, width in _TRIALS:
+        shapes.append(width**2 * windows.covariance(count * unit))
+        smoothed, central = smooth(coarse.mass, filled, shapes[-1], reflect)
+        left_out = np.maximum(smoothed.ravel()[filled] - central * squares / mass, 0.0)
+        scores.append(np.log((1.0 - _BACKGROUND) * left_out + _BACKGROUND * flat))
+    gain, error = windows.average(np.array(scores[1:]) - scores[0], _JUDGES * unit)
+    certain = np.vstack([np.zeros(len(filled)), gain - _CONFIDENCE * error])
+    # Neighbours share their choice: where wide kernels met narrow ones, the density would seem to have an edge.
+    choice = windows.average(np.argmax(certain, axis=0, keepdims=True).astype(float), _SHARED * unit)[0][0]
+    lower = np.minimum(choice.astype(np.intp), len(_TRIALS) - 2)
+    share, every, column = choice - lower, np.array(shapes), np.arange(len(filled))
+    covariance = ((1.0 - share) * every[lower, :, column].T) + share * every[lower + 1, :, column].T
+    parent = np.zeros(coarse.mass.size, dtype=np.intp)
+    parent[filled] = np.arange(len(filled))
+    places = np.flatnonzero(fine.mass)
+    column, row = np.unravel_index(places, fine.shape)
+    own = parent[(column // 2) * shape[1] + (row // 2 if dimension == 2 else row)]
+    units = np.array([4.0, 4.0, 4.0] if dimension == 2 else [4.0, 0.0, 0.0])[:, np.newaxis]
+    smoothed, _ = smooth(fine.mass, places, units * covariance[:, own], reflect)
+    return smoothed, np.sqrt(np.median(units[[0, 2]] * covariance[[0, 2]], axis=1))
 
 
 def _spread(values: FloatArray, weights: FloatArray) -> float:
-    """Standard deviation, or the one that the quartiles suggest where that is smaller."""
-    lower, upper = weighted_quantile(values, weights, np.array([0.25, 0.75]))
+    """Standard deviation, or the one that the central 95 % suggest where that is smaller."""
+    lower, upper = weighted_quantile(values, weights, np.array([0.025, 0.975]))
     mean = np.average(values, weights=weights)
     deviation = float(np.sqrt(np.average(np.square(values - mean), weights=weights)))
-    quartiles = float(upper - lower) / 1.349
-    return min(deviation, quartiles) if quartiles > 0.0 else deviation
+    central = float(upper - lower) / 3.92
+    return min(deviation, central) if central > 0.0 else deviation
 
 
 def _in_atom(values: FloatArray, weights: FloatArray) -> NDArray[np.bool_]:
@@ -188,8 +234,10 @@ def _in_atom(values: FloatArray, weights: FloatArray) -> NDArray[np.bool_]:
     return np.bincount(place, weights)[place] > _ATOM
 
 
-def _without_repeats(values: FloatArray, weights: FloatArray) -> FloatArray:
-    """Weights with repeated points taken together: a chain that stays put has not found a second point."""
+def _distinct(values: FloatArray, weights: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """Points and normalised weights, repeated points taken together: a chain that stays put has not found a second
+    point."""
     order = np.lexsort(values.T)
-    new = np.r_[True, np.any(np.diff(values[order], axis=0) != 0.0, axis=1)]
-    return np.add.reduceat(weights[order], np.flatnonzero(new))
+    ordered = values[order]
+    first = np.flatnonzero(np.r_[True, np.any(np.diff(ordered, axis=0) != 0.0, axis=1)])
+    return ordered[first], np.add.reduceat(weights[order], first) / weights.sum()
