@@ -72,7 +72,6 @@ def corner_data(material: Material) -> CornerData | None:
             columns[names[y]],
             weights,
             (material.axes[names[x]], material.axes[names[y]]),
-            cells=128,
         )
         for x, y in itertools.combinations(range(len(names)), 2)
     }

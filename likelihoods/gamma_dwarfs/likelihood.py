@@ -141,4 +141,4 @@ class DwarfLikelihood:
             level = -log_ndtr(data.background_centre / error)
         else:
             level = -0.5 * math.log(2.0 * math.pi) - np.log(error)
-        return constants + np.where(known, 0.0, level)
+        return np.asarray(constants + np.where(known, 0.0, level))

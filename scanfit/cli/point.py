@@ -122,6 +122,7 @@ def check(file: Path, points: int, as_json: bool) -> None:
     started = time.perf_counter()
     batch = posterior.evaluate_many(sample)
     seconds = (time.perf_counter() - started) / points
+    failures = [f"{failure.culprit}: {failure.message}" for failure in batch.failures]
     found = {
         "file": str(file),
         "model": posterior.model.name,
@@ -130,7 +131,7 @@ def check(file: Path, points: int, as_json: bool) -> None:
         "explorers": [planned.name for planned in run_file.explorers],
         "milliseconds_per_point": 1e3 * seconds,
         "points_evaluated": points,
-        "failures": [f"{failure.culprit}: {failure.message}" for failure in batch.failures],
+        "failures": failures,
         "caveats": list(run_file.caveats),
     }
     if as_json:
@@ -150,7 +151,7 @@ def check(file: Path, points: int, as_json: bool) -> None:
         f"{seconds * 1e5 / 60:.1f} min of one core.",
         highlight=False,
     )
-    for text in dict.fromkeys(found["failures"]):
+    for text in dict.fromkeys(failures):
         screen.print(f"Failed: {text}", highlight=False, soft_wrap=True)
     for caveat in run_file.caveats:
         screen.print(f"Note: {caveat}", highlight=False, soft_wrap=True)

@@ -151,6 +151,20 @@ class Grid:
         scaled : sequence of ndarray, each of shape (n,)
             Coordinates of the points along each axis, **worst point first**; NaN and points outside take no part.
         """
+        flat, inside = self._cell(scaled)
+        chosen = np.flatnonzero(inside)
+        found = np.full(int(np.prod(self.shape)), -1, dtype=np.intp)
+        # numpy keeps the last of several assignments to one place: the best, as points come worst first.
+        found[flat[chosen]] = chosen
+        return found.reshape(self.shape)
+
+    def count(self, scaled: Sequence[FloatArray]) -> IndexArray:
+        """Number of points in each cell; coordinates as for `best`, in any order."""
+        flat, inside = self._cell(scaled)
+        return np.bincount(flat[inside], minlength=int(np.prod(self.shape))).reshape(self.shape)
+
+    def _cell(self, scaled: Sequence[FloatArray]) -> tuple[IndexArray, NDArray[np.bool_]]:
+        """Flat index of the cell that each point lies in, and whether it lies in any."""
         flat = np.zeros(len(scaled[0]), dtype=np.intp)
         inside = np.ones(len(flat), dtype=bool)
         for values, edge, cells in zip(scaled, self.edges, self.shape, strict=True):
@@ -159,11 +173,7 @@ class Grid:
             inside &= (place >= -1e-9) & (place <= cells + 1e-9)
             place = np.where(inside, place, 0.0)
             flat = flat * cells + np.clip(place.astype(np.intp), 0, cells - 1)
-        chosen = np.flatnonzero(inside)
-        found = np.full(int(np.prod(self.shape)), -1, dtype=np.intp)
-        # numpy keeps the last of several assignments to one place: the best, as points come worst first.
-        found[flat[chosen]] = chosen
-        return found.reshape(self.shape)
+        return flat, inside
 
 
 def window(scaled: FloatArray, axis: Axis, stray: float = 0.0) -> tuple[float, float] | None:

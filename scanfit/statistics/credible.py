@@ -27,6 +27,9 @@ Interval: TypeAlias = tuple[float, float]
 
 _ISLAND: Final = 0.004
 """An island, or a gap, of the density that holds less weight than this is noise: it is dropped, or bridged."""
+_CERTAIN: Final = 2.0
+"""A gap counts where it holds fewer points than a density on the interval's boundary would put there, by this many
+standard deviations of their number; a density that only wavers about that height is not cut into pieces."""
 
 
 @dataclass(frozen=True)
@@ -90,12 +93,21 @@ def credible_intervals(density: Density, level: float, axis: Axis) -> list[Inter
     for start, stop in intervals_below(-density.height, -height):
         low = edges[0] if start <= 0.0 else float(np.interp(start, np.arange(len(grid)), grid))
         high = edges[-1] if stop >= len(grid) - 1 else float(np.interp(stop, np.arange(len(grid)), grid))
-        if found and np.diff(np.interp((found[-1][1], low), edges, held))[0] < _ISLAND:
+        if found and not _is_gap(found[-1][1], low, height, density):
             low = found.pop()[0]
         found.append((low, high))
     masses = [float(np.diff(np.interp(ends, edges, held))[0]) for ends in found]
     kept = [ends for ends, mass in zip(found, masses, strict=True) if mass >= min(_ISLAND, max(masses))]
     return [(float(from_scale(np.array(low), axis)), float(from_scale(np.array(high), axis))) for low, high in kept]
+
+
+def _is_gap(low: float, high: float, height: float, density: Density) -> bool:
+    """Whether a density is known to fall below a height between two places."""
+    held = np.r_[0.0, np.cumsum(density.mass)]
+    mass = float(np.diff(np.interp((low, high), density.edges[0], held))[0])
+    expected = density.effective_size * height * (high - low)
+    missing = expected - density.effective_size * mass
+    return mass >= _ISLAND and missing > _CERTAIN * math.sqrt(expected)
 
 
 def intervals_below(curve: FloatArray, threshold: float) -> list[Interval]:

@@ -22,13 +22,15 @@ from scanfit.statistics.kernels import Cells, Windows, smooth
 CELLS: Final = {1: 1024, 2: 256}
 """Cells along each axis, by dimension."""
 
+_WINDOW_CELLS: Final = {1: 256, 2: 64}
+"""Cells along each axis of the grid on which the shapes of kernels are sought, by dimension."""
 _TRIALS: Final = ((3.0, 0.85), (1.0, 0.75), (0.3, 0.65), (0.1, 0.55))
 """Kernels tried, smoothest first: the number of points that shape them, in units of size^(4 / (4 + d)), which balances
 bias and scatter, and their width in units of the spread of those points."""
 _JUDGES: Final = 1.0
 """Number of points around a kernel that judge it, in the same units."""
-_SHARED: Final = 0.2
-_CONFIDENCE: Final = 2.0
+_SHARED: Final = 0.3
+_CONFIDENCE: Final = 1.5
 """Standard errors by which a sharper kernel must be better than the smoothest."""
 _BACKGROUND: Final = 0.01
 """Share of a flat density mixed in while scoring, lest one stray point set the width for all."""
@@ -38,7 +40,7 @@ _STRAY_WEIGHT: Final = 1e-5
 """Share of the weight at each end that does not stretch the grid."""
 _NEGLIGIBLE: Final = 1e-10
 """Share of the largest weight below which a point is left out."""
-_CUT_OFF: Final = 0.3
+_CUT_OFF: Final = 0.2
 """A density whose last percent takes up less than this share of the nine before it is cut off there (0.11 for a flat
 density, 0.46 for one that falls linearly to zero, 0.7 and more for normal and exponential tails)."""
 
@@ -119,10 +121,10 @@ def sample_range(values: FloatArray, weights: FloatArray, low: float, high: floa
     if first - low < near:
         start = low
     else:
-        start = first if one - first < _CUT_OFF * (ten - one) else max(low, first - room)
+        start = first if one - first <= _CUT_OFF * (ten - one) else max(low, first - room)
     if high - last < near:
         return start, high
-    return start, last if last - ninety_nine < _CUT_OFF * (ninety_nine - ninety) else min(high, last + room)
+    return start, last if last - ninety_nine <= _CUT_OFF * (ninety_nine - ninety) else min(high, last + room)
 
 
 def estimate(
@@ -158,63 +160,73 @@ def estimate(
     atoms = _in_atom(points, kept)
     x, y = points[:, 0], points[:, 1] if dimension == 2 else np.full(len(points), 0.5)
     shape = (cells, cells if dimension == 2 else 1)
-    fine = Cells.of(x, y, np.where(atoms, 0.0, kept), shape)
-    smoothed, spread = _cross_validated(fine, x, y, np.where(atoms, 0.0, kept), size)
+    smoothed, spread = _cross_validated(x, y, np.where(atoms, 0.0, kept), size, shape)
     steps = [float(edge[1] - edge[0]) for edge in edges]
-    every = Cells.of(x, y, kept, shape).mass
+    mass = Cells.of(x, y, kept, shape).mass
+    held = Cells.of(x, y, np.where(atoms, kept, 0.0), shape).mass
     return Density(
         edges,
-        every.reshape((cells,) * dimension),
-        (smoothed + every - fine.mass).reshape((cells,) * dimension) / np.prod(steps),
+        mass.reshape((cells,) * dimension),
+        (smoothed + held).reshape((cells,) * dimension) / np.prod(steps),
         tuple(float(width * step) for width, step in zip(spread, steps, strict=False)),
         size,
     )
 
 
-def _cross_validated(
-    fine: Cells, x: FloatArray, y: FloatArray, weights: FloatArray, size: float
-) -> tuple[FloatArray, FloatArray]:
-    """Smoothed mass of each cell, and the median kernel width along x and y in cells.
-
-    The search works on cells of twice the size, which costs little. Of the trials whose score cannot be told from the
-    best by more than its standard error, the smoothest is taken (Breiman, Friedman, Olshen and Stone, Classification
-    and Regression Trees (1984), section 3.4.3).
-    """
+def _cross_validated(x: FloatArray, y: FloatArray, weights: FloatArray, size: float, shape: tuple[int, int]) -> tuple[FloatArray, FloatArray]:
+    dimension = 1 if shape[1] == 1 else 2
+    larger = max(shape[0] // _WINDOW_CELLS[dimension], 1)
+    fine, middle, coarse = (_cells(x, y, weights, shape, factor) for factor in (1, max(larger // 2, 1), larger))
     if not fine.mass.any():
-        return np.zeros(fine.shape), np.zeros(2)
-    dimension = 1 if fine.shape[1] == 1 else 2
-    shape = (fine.shape[0] // 2, max(fine.shape[1] // 2, 1))
-    halves = (0.5, 0.5 if dimension == 2 else 1.0)
-    coarse = Cells.of(x * halves[0], y * halves[1], weights, shape)
+        return fine.mass, np.zeros(2)
     power = 1.0 / (dimension + 4)
-    rule_of_thumb = [_spread(place, weights) * half * size**-power for place, half in zip((x, y), halves, strict=True)]
-    windows = Windows(coarse, rule_of_thumb)
-    filled = np.flatnonzero(coarse.mass)
-    mass, squares = coarse.mass.ravel()[filled], coarse.squares.ravel()[filled]
-    flat = coarse.mass.sum() / coarse.mass.size
-    reflect = (True, dimension == 2)
     unit = size ** (4.0 * power)
+    rule_of_thumb = [_spread(place, weights) / larger * size**-power for place in (x, y)]
+    windows = Windows(coarse, rule_of_thumb, _TRIALS[0][0] * unit)
+    reflect = (True, dimension == 2)
+    filled, own = _filled(middle, coarse)
+    mass, squares = middle.mass.ravel()[filled], middle.squares.ravel()[filled]
+    flat = mass.sum() / middle.mass.size
+    coarse_mass = np.bincount(own, mass)
     shapes, scores = [], []
     for count, width in _TRIALS:
         shapes.append(width**2 * windows.covariance(count * unit))
-        smoothed, central = smooth(coarse.mass, filled, shapes[-1], reflect)
+        smoothed, central = smooth(middle.mass, filled, _rescaled(shapes[-1][:, own], larger // max(larger // 2, 1), dimension), reflect)
         left_out = np.maximum(smoothed.ravel()[filled] - central * squares / mass, 0.0)
-        scores.append(np.log((1.0 - _BACKGROUND) * left_out + _BACKGROUND * flat))
-    gain, error = windows.average(np.array(scores[1:]) - scores[0], _JUDGES * unit)
-    certain = np.vstack([np.zeros(len(filled)), gain - _CONFIDENCE * error])
+        score = np.log((1.0 - _BACKGROUND) * left_out + _BACKGROUND * flat)
+        scores.append(np.bincount(own, mass * score) / coarse_mass)
+    gain, error = windows.average(np.array(scores) - scores[0], _JUDGES * unit)
+    best, every = np.argmax(gain, axis=0), np.arange(gain.shape[1])
+    smoothest = np.argmax(gain >= gain[best, every] - _CONFIDENCE * error[best, every], axis=0)
     # Neighbours share their choice: where wide kernels met narrow ones, the density would seem to have an edge.
-    choice = windows.average(np.argmax(certain, axis=0, keepdims=True).astype(float), _SHARED * unit)[0][0]
+    choice = windows.average(smoothest[np.newaxis].astype(float), _SHARED * unit)[0][0]
     lower = np.minimum(choice.astype(np.intp), len(_TRIALS) - 2)
-    share, every, column = choice - lower, np.array(shapes), np.arange(len(filled))
-    covariance = ((1.0 - share) * every[lower, :, column].T) + share * every[lower + 1, :, column].T
-    parent = np.zeros(coarse.mass.size, dtype=np.intp)
-    parent[filled] = np.arange(len(filled))
-    places = np.flatnonzero(fine.mass)
-    column, row = np.unravel_index(places, fine.shape)
-    own = parent[(column // 2) * shape[1] + (row // 2 if dimension == 2 else row)]
-    units = np.array([4.0, 4.0, 4.0] if dimension == 2 else [4.0, 0.0, 0.0])[:, np.newaxis]
-    smoothed, _ = smooth(fine.mass, places, units * covariance[:, own], reflect)
-    return smoothed, np.sqrt(np.median(units[[0, 2]] * covariance[[0, 2]], axis=1))
+    share, kernels = choice - lower, np.array(shapes)
+    covariance = (1.0 - share) * kernels[lower, :, every].T + share * kernels[lower + 1, :, every].T
+    filled, own = _filled(fine, coarse)
+    covariance = _rescaled(covariance[:, own], larger, dimension)
+    smoothed, _ = smooth(fine.mass, filled, covariance, reflect)
+    return smoothed, np.sqrt(np.median(covariance[[0, 2]], axis=1))
+
+
+def _cells(x: FloatArray, y: FloatArray, weights: FloatArray, shape: tuple[int, int], factor: int) -> Cells:
+    """Sort points into cells that are `factor` times larger; one column stays one column."""
+    across, along = (1.0 / factor if size > 1 else 1.0 for size in shape)
+    return Cells.of(x * across, y * along, weights, (max(shape[0] // factor, 1), max(shape[1] // factor, 1)))
+
+
+def _filled(fine: Cells, coarse: Cells) -> tuple[NDArray[np.intp], NDArray[np.intp]]:
+    """Flat indices of the filled cells, and the place of the larger cell around each among the filled larger cells."""
+    filled = np.flatnonzero(fine.mass)
+    column, row = np.unravel_index(filled, fine.shape)
+    across, along = (size // larger for size, larger in zip(fine.shape, coarse.shape, strict=True))
+    around = (column // across) * coarse.shape[1] + row // along
+    return filled, np.searchsorted(np.flatnonzero(coarse.mass), around)
+
+
+def _rescaled(covariance: FloatArray, factor: int, dimension: int) -> FloatArray:
+    """Covariance in cells that are `factor` times smaller; no width across a single column."""
+    return covariance * (float(factor) ** 2 * np.array([1.0, 1.0, 1.0] if dimension == 2 else [1.0, 0.0, 0.0]))[:, np.newaxis]
 
 
 def _spread(values: FloatArray, weights: FloatArray) -> float:
@@ -236,7 +248,8 @@ def _in_atom(values: FloatArray, weights: FloatArray) -> NDArray[np.bool_]:
 
 def _distinct(values: FloatArray, weights: FloatArray) -> tuple[FloatArray, FloatArray]:
     """Points and normalised weights, repeated points taken together: a chain that stays put has not found a second
-    point."""
+    point.
+    """
     order = np.lexsort(values.T)
     ordered = values[order]
     first = np.flatnonzero(np.r_[True, np.any(np.diff(ordered, axis=0) != 0.0, axis=1)])

@@ -21,7 +21,11 @@ from scanfit.priors import FloatArray
 
 _WIDEST: Final = 1.5
 """Widest window in units of the rule of thumb for a normal density: no window reaches from one mode to the next."""
-_STEP: Final = 2.0**0.5
+_GROWTH: Final = 2.0
+"""Variance of a window in units of that of the points in the one before."""
+_MOST_STEPS: Final = 16
+_SEEN: Final = 3.0
+"""Standard deviations at which a window ends."""
 _NARROWEST_WINDOW: Final = 1.0
 """Narrowest window in cells of the grid that the windows work on."""
 _NARROWEST_KERNEL: Final = 0.6
@@ -30,7 +34,7 @@ _CUT: Final = 4.0
 """Standard deviations at which a kernel is cut off."""
 _WIDE: Final = 4.0
 """Standard deviation in cells above which a kernel may as well be drawn on cells of twice the size."""
-_UNCERTAIN: Final = 4.0
+_UNCERTAIN: Final = 8.0
 """Number of points up to which their covariance is distrusted, and pulled towards that of the window."""
 
 
@@ -71,7 +75,10 @@ class Cells:
 
 
 class Windows:
-    """Count and covariance of the points around each cell, through Gaussian windows of rising width.
+    """Count and covariance of the points around each filled cell, through Gaussian windows that grow along them.
+
+    Each window is twice as large as the one before and has the shape of the points that were seen in that: on a band
+    it grows along the band and does not reach across to what lies beside it.
 
     Parameters
     ----------
@@ -79,33 +86,60 @@ class Windows:
         The points.
     rule_of_thumb : pair of float
         Kernel width for a normal density along each axis, in cells.
+    most : float
+        Number of points at which a window stops to grow.
     """
 
-    def __init__(self, cells: Cells, rule_of_thumb: Sequence[float]) -> None:
-        widest = _WIDEST * np.maximum(np.asarray(rule_of_thumb, dtype=float), _NARROWEST_WINDOW)
-        steps = max(1, int(np.ceil(np.log(widest.max() / _NARROWEST_WINDOW) / np.log(_STEP))))
-        widths = [np.maximum(widest * _STEP**-step, _NARROWEST_WINDOW) for step in range(steps, -1, -1)]
-        self._cells, self._widths = cells, widths
-        self._places = np.flatnonzero(cells.mass)
-        counts, shapes = zip(*(self._seen(cells, width) for width in widths), strict=True)
-        self._counts, self._shapes = np.array(counts), np.array(shapes)
+    def __init__(self, cells: Cells, rule_of_thumb: Sequence[float], most: float) -> None:
+        self._cells, self._places = cells, np.flatnonzero(cells.mass)
+        limit = np.square(_WIDEST * np.maximum(np.asarray(rule_of_thumb, dtype=float), _NARROWEST_WINDOW))
+        number = len(self._places)
+        window = np.repeat(np.array([[1.0], [0.0], [1.0]]) * _NARROWEST_WINDOW**2, number, axis=1)
+        growing = np.arange(number)
+        windows, counts, shapes = [], [], []
+        count, shape = np.zeros(number), window.copy()
+        for _ in range(_MOST_STEPS):
+            count, shape = count.copy(), shape.copy()
+            count[growing], shape[:, growing] = self._seen(growing, window[:, growing])
+            windows.append(window)
+            counts.append(count)
+            shapes.append(shape)
+            small = np.maximum(window[0] / limit[0], window[2] / limit[1]) < 1.0
+            growing = np.flatnonzero(small & (count < most))
+            if len(growing) == 0:
+                break
+            window = window.copy()
+            window[:, growing] = self._grown(window[:, growing], shape[:, growing])
+        self._windows, self._counts, self._shapes = np.array(windows), np.array(counts), np.array(shapes)
 
-    def _seen(self, cells: Cells, width: FloatArray) -> tuple[FloatArray, FloatArray]:
-        """Effective number of points, shape (n,), and their covariance xx, xy, yy, shape (3, n), at filled cells."""
-        across, along = _window(cells.shape, width)
-        sums = (across @ cells.moments @ along).reshape(6, -1)[:, self._places]
-        squares = (np.square(across) @ cells.squares @ np.square(along)).ravel()[self._places]
-        x, y, xx, xy, yy = sums[1:] / sums[0]
-        count = np.square(sums[0]) / squares
+    def _grown(self, window: FloatArray, shape: FloatArray) -> FloatArray:
+        """Windows of twice the area with the shape of the points; in one dimension, of twice the variance."""
+        if self._cells.shape[1] == 1:
+            return np.asarray(window * np.array([[_GROWTH], [1.0], [1.0]]))
+        seen = shape + np.array([[_NARROWEST_KERNEL**2], [0.0], [_NARROWEST_KERNEL**2]])
+        size, seen_size = (kind[0] * kind[2] - np.square(kind[1]) for kind in (window, seen))
+        return np.asarray(_GROWTH * np.sqrt(size / seen_size) * seen)
+
+    def _seen(self, which: NDArray[np.intp], window: FloatArray) -> tuple[FloatArray, FloatArray]:
+        """Effective number of points in windows and their covariance xx, xy, yy."""
+        moments = np.moveaxis(self._cells.moments, 0, -1)
+        sums, squares, flat = self._look(moments, self._cells.squares[..., np.newaxis], which, window)
+        x, y, xx, xy, yy = sums[:, 1:].T / sums[:, 0]
+        count = np.square(sums[:, 0]) / squares[:, 0]
         shape = np.array([np.maximum(xx - x * x, 0.0), xy - x * y, np.maximum(yy - y * y, 0.0)])
         # A window that sticks out of the grid sees less, and that narrower, than it would of the same density inside.
-        column, row = np.unravel_index(self._places, cells.shape)
-        (share_x, narrowing_x), (share_y, narrowing_y) = _seen_of_flat(across), _seen_of_flat(along)
-        count /= share_x[column] * share_y[row]
-        shape /= [narrowing_x[column], np.sqrt(narrowing_x[column] * narrowing_y[row]), narrowing_y[row]]
-        blank = np.array([width[0] ** 2, 0.0, width[1] ** 2])[:, np.newaxis]
-        distrust = np.square(_UNCERTAIN / (_UNCERTAIN + count))
-        return count, (1.0 - distrust) * shape + distrust * blank
+        share, narrow_x, narrow_y = flat.T
+        shape /= np.array([narrow_x, np.sqrt(narrow_x * narrow_y), narrow_y])
+        distrust = _UNCERTAIN / (_UNCERTAIN + count)
+        return count / share, (1.0 - distrust) * shape + distrust * window
+
+    def _look(
+        self, linear: FloatArray, square: FloatArray, which: NDArray[np.intp], window: FloatArray
+    ) -> tuple[FloatArray, FloatArray, FloatArray]:
+        column, row = np.unravel_index(self._places[which], self._cells.shape)
+        return _look_through_windows(  # type: ignore[no-any-return]  # numba has no types
+            np.ascontiguousarray(linear), np.ascontiguousarray(square), self._cells.mass, column, row, *window, _SEEN
+        )
 
     def covariance(self, count: float) -> FloatArray:
         """Covariance xx, xy, yy around each filled cell, in the window that holds `count` points; shape (3, n).
@@ -131,49 +165,82 @@ class Windows:
         count : float
             Points in the window.
         """
-        level = self._first_to_hold(count)
+        level, every = self._first_to_hold(count), np.arange(len(self._places))
+        number = len(values)
         mass, squares = self._cells.mass.ravel()[self._places], self._cells.squares.ravel()[self._places]
-        means, errors = np.empty(values.shape), np.empty(values.shape)
-        for chosen in np.unique(level):
-            window = _window(self._cells.shape, self._widths[chosen])
-            here = level == chosen
-            total = self._sum(mass, window)[here]
-            mean = self._sum(mass * values, window)[:, here] / total
-            narrow = (np.square(window[0]), np.square(window[1]))
-            square, linear = self._sum(squares * np.square(values), narrow), self._sum(squares * values, narrow)
-            rest = square[:, here] + mean * (mean * self._sum(squares, narrow)[here] - 2.0 * linear[:, here])
-            scatter = np.maximum(rest, 0.0) / np.square(total)
-            means[:, here], errors[:, here] = mean, np.sqrt(scatter + 1.0 / self._counts[chosen, here])
-        return means, errors
+        linear = self._spread_out(np.vstack([mass, mass * values]))
+        square = self._spread_out(np.vstack([squares, squares * values, squares * np.square(values)]))
+        sums, second, _ = self._look(linear, square, every, self._windows[level, :, every].T)
+        mean = sums[:, 1:].T / sums[:, 0]
+        rest = second[:, 1 + number :].T + mean * (mean * second[:, 0] - 2.0 * second[:, 1 : 1 + number].T)
+        scatter = np.maximum(rest, 0.0) / np.square(sums[:, 0])
+        return mean, np.sqrt(scatter + 1.0 / self._counts[level, every])
 
-    def _sum(self, values: FloatArray, window: tuple[FloatArray, FloatArray]) -> FloatArray:
-        """Sum values of filled cells, shape (..., n), over the windows around these cells."""
-        grid = np.zeros((*values.shape[:-1], self._cells.mass.size))
-        grid[..., self._places] = values
-        summed = window[0] @ grid.reshape(*values.shape[:-1], *self._cells.shape) @ window[1]
-        return np.asarray(summed.reshape(grid.shape)[..., self._places])
+    def _spread_out(self, values: FloatArray) -> FloatArray:
+        grid = np.zeros((self._cells.mass.size, len(values)))
+        grid[self._places] = values.T
+        return grid.reshape(*self._cells.shape, len(values))
 
     def _first_to_hold(self, count: float) -> NDArray[np.intp]:
         enough = self._counts >= count
         return np.where(enough.any(axis=0), np.argmax(enough, axis=0), len(enough) - 1)
 
 
-def _window(shape: tuple[int, int], width: FloatArray) -> tuple[FloatArray, FloatArray]:
-    """Gaussian window around every place along each of two axes, as matrices."""
-    across, along = (
-        np.exp(-0.5 * np.square(np.subtract.outer(np.arange(size), np.arange(size)) / w))
-        for size, w in zip(shape, width, strict=True)
-    )
-    return across, along
+@njit(cache=True, fastmath=False, error_model="numpy")
+def _look_through_windows(
+    linear: FloatArray, square: FloatArray, mass: FloatArray, column: NDArray[np.intp], row: NDArray[np.intp],
+    xx: FloatArray, xy: FloatArray, yy: FloatArray, cut: float,
+) -> tuple[FloatArray, FloatArray, FloatArray]:  # fmt: skip
+    """Sum fields over Gaussian windows with given centres and covariances, all in cells.
 
-
-def _seen_of_flat(window: FloatArray) -> tuple[FloatArray, FloatArray]:
-    """What a window at each cell sees of a flat density: its share of the largest mass, and of the largest variance."""
-    place = np.arange(len(window)) + 0.5
-    mass = window.sum(axis=1)
-    mean = window @ place / mass
-    variance = window @ np.square(place) / mass - np.square(mean) + 1.0 / 12.0
-    return mass / mass.max(), variance / variance.max()
+    Returns the sums of `linear` times the window, of `square` times its square, and what the window sees of a flat
+    density: the share of its mass inside the grid and of its variances along the axes.
+    """
+    first, second = np.zeros((len(column), linear.shape[2])), np.zeros((len(column), square.shape[2]))
+    flat = np.ones((len(column), 3))
+    for k in range(len(column)):
+        slope = xy[k] / xx[k]
+        spread = np.sqrt(yy[k] - xy[k] * slope)
+        decay = np.exp(-1.0 / spread**2)
+        reach = int(np.ceil(cut * np.sqrt(xx[k])))
+        height = int(np.ceil(cut * np.sqrt(yy[k])))
+        inside = column[k] >= reach and column[k] + reach < mass.shape[0]
+        inside = inside and (mass.shape[1] == 1 or (row[k] >= height and row[k] + height < mass.shape[1]))
+        total = x = y = x_square = y_square = 0.0
+        for i in range(max(0, column[k] - reach), min(mass.shape[0], column[k] + reach + 1)):
+            offset = i - column[k]
+            middle = row[k] + slope * offset
+            outer = np.exp(-0.5 * offset**2 / xx[k])
+            low = max(0, int(np.ceil(middle - cut * spread)))
+            # Values of a Gaussian at equal steps follow from their ratios, which fall by a constant factor.
+            following = outer * np.exp(-0.5 * ((low - middle) / spread) ** 2)
+            ratio = np.exp(-(low - middle + 0.5) / spread**2)
+            for j in range(low, min(mass.shape[1], int(np.floor(middle + cut * spread)) + 1)):
+                seen = following
+                following *= ratio
+                ratio *= decay
+                if inside and mass[i, j] == 0.0:
+                    continue
+                if not inside:
+                    total += seen
+                    x += seen * offset
+                    x_square += seen * offset**2
+                    y += seen * (j - row[k])
+                    y_square += seen * (j - row[k]) ** 2
+                    if mass[i, j] == 0.0:
+                        continue
+                for field in range(linear.shape[2]):
+                    first[k, field] += seen * linear[i, j, field]
+                for field in range(square.shape[2]):
+                    second[k, field] += seen * seen * square[i, j, field]
+        if not inside:
+            if mass.shape[1] > 1:
+                flat[k, 0] = min(1.0, total / (2.0 * np.pi * np.sqrt(xx[k]) * spread))
+                flat[k, 2] = min(1.0, max((y_square - y * y / total) / total + 1.0 / 12.0, 0.1 * yy[k]) / yy[k])
+            else:
+                flat[k, 0] = min(1.0, total / np.sqrt(2.0 * np.pi * xx[k]))
+            flat[k, 1] = min(1.0, max((x_square - x * x / total) / total + 1.0 / 12.0, 0.1 * xx[k]) / xx[k])
+    return first, second, flat
 
 
 def smooth(
@@ -286,7 +353,6 @@ def _add_kernels(
             middle = y[k] + slope * offset
             first = max(0, int(np.ceil(middle - cut * spread - 0.5)))
             last = min(grid.shape[1], int(np.floor(middle + cut * spread + 0.5)))
-            # Values of a Gaussian at equal steps follow from their ratios, which fall by a constant factor.
             start = first + 0.5 - middle
             value = scale * np.exp(-0.5 * (offset**2 / xx[k] + (start / spread) ** 2))
             ratio = np.exp(-(start + 0.5) / spread**2)

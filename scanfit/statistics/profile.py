@@ -31,6 +31,9 @@ SHOWN: Final = 16.0
 GAP: Final = 1.0
 """Intervals count as separate only where 2 ln L falls this far below the threshold between them: the scatter of binned
 maxima would cut one interval into many."""
+EXPECTED: Final = 5.0
+"""Intervals count as separate only where so many points within the threshold would have been found between them, had
+the likelihood been as good there as beside it. Chance leaves such a gap empty in 0.7 % of cases."""
 
 CAVEAT: Final = (
     "Binned maxima of archived points: a lower bound to the true profile likelihood, 0.1 to 1.4 units of 2 ln L too "
@@ -59,6 +62,10 @@ class Profile:
         Coordinates of those points on the scale of the axes; NaN where empty.
     two_delta : ndarray
         Drop of 2 ln L from the best fit; NaN where empty.
+    tried : ndarray of int
+        Number of points in each cell, however bad.
+    near : tuple of (ndarray, ndarray)
+        Places of the points within `SHOWN` of the best fit along the first axis, and their drop of 2 ln L.
     """
 
     axes: tuple[Axis, ...]
@@ -66,6 +73,8 @@ class Profile:
     rows: IndexArray
     places: tuple[FloatArray, ...]
     two_delta: FloatArray
+    tried: IndexArray
+    near: tuple[FloatArray, FloatArray]
 
 
 def profile(points: pd.DataFrame, axes: tuple[Axis, ...], archive: Archive | None = None) -> Profile | None:
@@ -101,7 +110,11 @@ def profile(points: pd.DataFrame, axes: tuple[Axis, ...], archive: Archive | Non
     best = grid.best(scaled)
     found = np.where(best >= 0, rows[best], -1)
     places = tuple(np.where(best >= 0, values[best], np.nan) for values in scaled)
-    return Profile(axes, grid, found, places, archive.two_delta(found))
+    everywhere = [to_scale(column[archive.order_with_zeros], axis) for column, axis in zip(columns, axes, strict=True)]
+    near_places = to_scale(columns[0][near], axes[0])
+    return Profile(
+        axes, grid, found, places, archive.two_delta(found), grid.count(everywhere), (near_places, archive.two_delta(near))
+    )
 
 
 def profile_intervals(curve: Profile, level: float) -> list[Interval]:
@@ -118,7 +131,8 @@ def profile_intervals(curve: Profile, level: float) -> list[Interval]:
     -------
     list of (low, high)
         Ends are interpolated between the best points of neighbouring cells, linearly in the square root of the drop,
-        which is exact for a parabola; an interval that reaches the prior's bound ends there.
+        which is exact for a parabola; an interval that reaches the prior's bound ends there. Intervals are taken
+        together where the gap between them is not known to be one: see `GAP` and `EXPECTED`.
     """
     axis, edges = curve.axes[0], curve.grid.edges[0]
     threshold = likelihood_threshold(level, 1)
@@ -129,7 +143,7 @@ def profile_intervals(curve: Profile, level: float) -> list[Interval]:
     found: list[Interval] = []
     for low, high in intervals_below(np.sqrt(drop), np.sqrt(threshold)):
         gap = drop[int(np.floor(found[-1][1])) + 1 : int(np.ceil(low))] if found else np.array([np.inf])
-        if gap.max(initial=0.0) < threshold + GAP:
+        if gap.max(initial=0.0) < threshold + GAP or (found and _expected(curve, threshold, found[-1][1], low) < EXPECTED):
             low = found.pop()[0]
         found.append((low, high))
     # Beside an empty cell, and at the window's ends, the cell's own edge is all that is known.
@@ -142,6 +156,25 @@ def profile_intervals(curve: Profile, level: float) -> list[Interval]:
         for low, high in found
     ]
     return [(float(from_scale(np.array(low), axis)), float(from_scale(np.array(high), axis))) for low, high in ends]
+
+
+def _expected(curve: Profile, threshold: float, start: float, stop: float) -> float:
+    """Number of points within the threshold to expect in the gap between two intervals, given as fractional cells.
+
+    Two estimates from the stretches beside the gap, as wide as the gap: the number of points within the threshold
+    there, and their share of all points there times the number of points tried in the gap. The worse side counts, and
+    the larger estimate: a gap is known either because points were found on both sides and not between, or because the
+    search went there in vain.
+    """
+    edges, cells = curve.grid.edges[0], len(curve.two_delta)
+    first, last = int(np.floor(start)) + 1, int(np.ceil(stop))  # the cells of the gap
+    width = max(last - first, 1)
+    place, drop = curve.near
+    good = np.histogram(place[drop <= threshold], edges)[0]
+    beside = [slice(max(first - width, 0), first), slice(last, min(last + width, cells))]
+    found = [float(good[side].sum()) for side in beside]
+    share = [number / max(int(curve.tried[side].sum()), 1) for number, side in zip(found, beside, strict=True)]
+    return max(min(found), min(share) * int(curve.tried[first:last].sum()))
 
 
 def profile_table(

@@ -47,7 +47,10 @@ BROKEN = {
     "unknown model": (('"toy.py:Plane"', '"scalar-singlett"'), ["model.use", "did you mean 'scalar-singlet'?"]),
     "unknown term": (('"toy.py:Bump"', '"gama-dwarfs"'), ["terms.bump.use", "did you mean 'gamma-dwarfs'?"]),
     "unknown explorer": (('"nested"', '"nest"'), ["explore.use", "'nest'", "allowed: ensemble, nested"]),
-    "explorer named twice": (('use = "nested"', 'use = ["nested", "nested"]'), ["explore.use: names an explorer twice"]),
+    "explorer named twice": (
+        ('use = "nested"', 'use = ["nested", "nested"]'),
+        ["explore.use: names an explorer twice"],
+    ),
     "option of an explorer": (("live_points = 100", "life_points = 100"), ["explore.life_points", "'live_points'"]),
     "stray option": (('use = "nested"', 'use = ["nested", "ensemble"]'), ["explore.live_points", "table"]),
     "option of a term": (("sigma = 0.2", "sgima = 0.2"), ["terms.bump.sgima: unknown key", "did you mean 'sigma'?"]),

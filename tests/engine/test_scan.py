@@ -187,9 +187,7 @@ def test_point_prints_standard_json(toy: Toy, capsys: pytest.CaptureFixture[str]
         (["x=0.3", "y=0", "shfit=1"], "did you mean 'shift'?"),
     ],
 )
-def test_point_names_what_is_wrong(
-    toy: Toy, capsys: pytest.CaptureFixture[str], words: list[str], says: str
-) -> None:
+def test_point_names_what_is_wrong(toy: Toy, capsys: pytest.CaptureFixture[str], words: list[str], says: str) -> None:
     with pytest.raises(SystemExit) as caught:
         main(["point", str(toy()), *words])
     assert caught.value.code == 2

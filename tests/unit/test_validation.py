@@ -38,9 +38,7 @@ def problems(table: dict[str, object]) -> list[str]:
 def test_all_problems_come_at_once() -> None:
     found = problems({"inner": {"exposure": -1.0, "count": (1,)}, "mode": "upper-limits"})
     assert len(found) == 3
-    assert any(
-        "terms.xenon.inner.exposure: must be greater than 0 (given: -1.0)" == text for text in found
-    )
+    assert any(text == "terms.xenon.inner.exposure: must be greater than 0 (given: -1.0)" for text in found)
     assert any("inner.count: unknown key; did you mean 'counts'?" in text for text in found)
     assert any("did you mean 'upper-limit'?" in text for text in found)
 
