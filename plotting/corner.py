@@ -14,7 +14,7 @@ from matplotlib.lines import Line2D
 from matplotlib.patches import Patch
 from matplotlib.ticker import MaxNLocator
 
-from scanfit.statistics.credible import CredibleRegion, credible_height, credible_region, marginal_density
+from scanfit.statistics.credible import CredibleRegion, credible_region, inside_intervals, marginal_density
 from scanfit.statistics.density import Density
 from scanfit.statistics.levels import LEVELS
 from scanfit.statistics.scale import to_scale
@@ -126,7 +126,7 @@ def draw_corner(data: CornerData, footnote: str = "") -> Figure:
 def _draw_density(axes: Axes, density: Density) -> None:
     colour, x = COLOURS["posterior"], density.centres[0]
     for level, strength in (("95", 0.3), ("68", 0.72)):
-        inside = density.height >= credible_height(density, LEVELS[level])
+        inside = inside_intervals(density, LEVELS[level])
         axes.fill_between(x, density.height, where=inside.tolist(), color=tint(colour, strength), linewidth=0)
     axes.plot(x, density.height, color=colour, linewidth=1.0)
     axes.set_ylim(0.0, 1.1 * float(density.height.max()))

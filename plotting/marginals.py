@@ -14,7 +14,7 @@ from matplotlib.patches import Patch
 
 from scanfit.priors import FloatArray, Prior
 from scanfit.results import Axis
-from scanfit.statistics.credible import credible_height, marginal_density
+from scanfit.statistics.credible import inside_intervals, marginal_density
 from scanfit.statistics.density import Density
 from scanfit.statistics.levels import LEVELS
 from scanfit.statistics.profile import Profile, profile
@@ -107,7 +107,7 @@ def _draw_panel(axes: Axes, panel: MarginalData) -> None:
     set_axis(axes, "x", axis, (float(low), float(high)))
     axes.set_ylim(0.0, 1.09)
     for level, strength in (("95", 0.25), ("68", 0.6)):
-        inside = density.height >= credible_height(density, LEVELS[level])
+        inside = inside_intervals(density, LEVELS[level])
         axes.fill_between(grid, density.height / peak, where=inside.tolist(), color=tint(colour, strength), linewidth=0)
     axes.plot(grid, density.height / peak, color=colour)
     axes.plot(grid, panel.prior / peak, color=COLOURS["prior"], linestyle=":", linewidth=1.2)

@@ -14,6 +14,9 @@ _FIRST_LINE_SECONDS = 10.0
 _LINE_GROWTH = 1.25
 _LONGEST_SILENCE_SECONDS = 600.0
 
+# Numbers of an explorer that say nothing about how far it is.
+_LEFT_OUT = ("calls", "steps", "log_evidence")
+
 
 def reporter_for(console: Console) -> Reporter:
     """The reporter that suits where the output goes."""
@@ -41,9 +44,9 @@ class LiveBar:
             self._bar = Progress(
                 SpinnerColumn(),
                 TextColumn("[bold]{task.description}"),
-                BarColumn(bar_width=24),
-                TextColumn("{task.fields[numbers]}"),
+                BarColumn(bar_width=16),
                 TimeElapsedColumn(),
+                TextColumn("{task.fields[numbers]}"),
                 console=self._console,
                 transient=True,
                 refresh_per_second=4,
@@ -54,7 +57,7 @@ class LiveBar:
         fraction = tally.progress.fraction
         self._bar.update(
             self._task,
-            description=f"{tally.explorer} {tally.progress.phase}",
+            description=_what(tally),
             total=None if fraction is None else 1.0,
             completed=fraction or 0.0,
             numbers=_numbers(tally),
@@ -88,7 +91,7 @@ class PlainLines:
         self._next = now + self._pause
         fraction = tally.progress.fraction
         share = "" if fraction is None else f" {100.0 * fraction:.0f} %"
-        self._line(f"{tally.explorer} {tally.progress.phase}{share}, {_numbers(tally)}")
+        self._line(f"{_what(tally)}{share}, {_numbers(tally)}")
 
     def close(self) -> None:
         """Nothing to remove."""
@@ -99,14 +102,21 @@ class PlainLines:
         self._console.print(f"[{clock}] {text}", markup=False, highlight=False, soft_wrap=True)
 
 
+def _what(tally: Tally) -> str:
+    phase = tally.progress.phase
+    return phase if phase.startswith(tally.explorer) else f"{tally.explorer} {phase}"
+
+
 def _numbers(tally: Tally) -> str:
+    """What a glance needs; the rest is in ``scanfit status``."""
     parts = [f"{tally.archived:,} points", f"{tally.rate:,.0f}/s"]
-    parts += [f"{name} {value:.3g}" for name, value in tally.progress.numbers.items()]
-    parts.append(f"best lnL {tally.best:.2f}")
-    if tally.failed:
-        parts.append(f"{tally.failed:,} failed")
     if tally.seconds_left is not None:
         parts.append(f"about {_duration(tally.seconds_left)} left")
+    if tally.failed:
+        parts.append(f"{tally.failed:,} failed")
+    shown = tally.progress.numbers.items()
+    parts += [f"{name.replace('_', ' ')} {value:.3g}" for name, value in shown if name not in _LEFT_OUT]
+    parts.append(f"best ln L {tally.best:.2f}")
     return ", ".join(parts)
 
 

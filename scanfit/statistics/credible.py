@@ -16,6 +16,7 @@ from dataclasses import dataclass
 from typing import Final, TypeAlias
 
 import numpy as np
+from numpy.typing import NDArray
 
 from scanfit.priors import FloatArray
 from scanfit.results import Axis
@@ -86,6 +87,20 @@ def credible_intervals(density: Density, level: float, axis: Axis) -> list[Inter
     level : float
         Posterior probability that they hold together.
     """
+    return [
+        (float(from_scale(np.array(low), axis)), float(from_scale(np.array(high), axis)))
+        for low, high in _scaled_intervals(density, level)
+    ]
+
+
+def inside_intervals(density: Density, level: float) -> NDArray[np.bool_]:
+    """Cells of a one-dimensional density whose centres lie in its credible intervals, for shading."""
+    grid = density.centres[0]
+    return np.logical_or.reduce([(grid >= low) & (grid <= high) for low, high in _scaled_intervals(density, level)])
+
+
+def _scaled_intervals(density: Density, level: float) -> list[Interval]:
+    """Credible intervals on the scale of the axis."""
     height = credible_height(density, level)
     edges, grid = density.edges[0], density.centres[0]
     held = np.r_[0.0, np.cumsum(density.mass)]
@@ -97,8 +112,7 @@ def credible_intervals(density: Density, level: float, axis: Axis) -> list[Inter
             low = found.pop()[0]
         found.append((low, high))
     masses = [float(np.diff(np.interp(ends, edges, held))[0]) for ends in found]
-    kept = [ends for ends, mass in zip(found, masses, strict=True) if mass >= min(_ISLAND, max(masses))]
-    return [(float(from_scale(np.array(low), axis)), float(from_scale(np.array(high), axis))) for low, high in kept]
+    return [ends for ends, mass in zip(found, masses, strict=True) if mass >= min(_ISLAND, max(masses))]
 
 
 def _is_gap(low: float, high: float, height: float, density: Density) -> bool:

@@ -1,10 +1,13 @@
 """Weighted density estimates in one and two dimensions.
 
-Points on a fine grid are smoothed with kernels whose width and shape follow the points around them (`kernels`): one
-width for all would either break broad parts of a dark-matter posterior into speckles or smear its thin bands. Kernels
-are reflected at the grid's ends, so that a density cut off by the prior is not depleted there. How many points shape
-a kernel, and how wide it is, is found by likelihood cross-validation (Habbema, Hermans and van den Broek, COMPSTAT
-(1974) 101; Duin, IEEE Trans. Comput. C-25 (1976) 1175).
+Points on a fine grid are smoothed with Gaussian kernels whose width and shape follow the points around them: one width
+for all would either break the broad parts of a dark-matter posterior into speckles or smear its thin bands. A kernel
+has the covariance of its nearest points (`windows`), so that its width goes with density^(-1/2) in two dimensions, the
+law of Abramson, Ann. Statist. 10 (1982) 1217, and it is drawn out along bands. Kernels are reflected at the grid's
+ends, so that a density cut off by the prior is not depleted there.
+
+How many points shape a kernel is found by likelihood cross-validation (Duin, IEEE Trans. Comput. C-25 (1976) 1175),
+place by place: the points around a kernel judge it.
 """
 
 from __future__ import annotations
@@ -17,21 +20,24 @@ import numpy as np
 from numpy.typing import NDArray
 
 from scanfit.priors import FloatArray
-from scanfit.statistics.kernels import Cells, Windows, smooth
+from scanfit.statistics.kernels import smooth
+from scanfit.statistics.windows import Cells, Windows
 
 CELLS: Final = {1: 1024, 2: 256}
 """Cells along each axis, by dimension."""
 
 _WINDOW_CELLS: Final = {1: 256, 2: 64}
-"""Cells along each axis of the grid on which the shapes of kernels are sought, by dimension."""
+"""Cells along each axis of the coarser grid on which the shapes of kernels are sought, by dimension."""
 _TRIALS: Final = ((3.0, 0.85), (1.0, 0.75), (0.3, 0.65), (0.1, 0.55))
 """Kernels tried, smoothest first: the number of points that shape them, in units of size^(4 / (4 + d)), which balances
 bias and scatter, and their width in units of the spread of those points."""
 _JUDGES: Final = 1.0
 """Number of points around a kernel that judge it, in the same units."""
 _SHARED: Final = 0.3
-_CONFIDENCE: Final = 1.5
-"""Standard errors by which a sharper kernel must be better than the smoothest."""
+"""Number of points that share a choice, in the same units."""
+_CONFIDENCE: Final = {1: 3.0, 2: 1.5}
+"""The smoothest kernel is taken that is worse than the best by at most so many standard errors, by dimension. Tried on
+normal, flat, banded and bimodal samples: the smallest for which chance does not choose sharp kernels."""
 _BACKGROUND: Final = 0.01
 """Share of a flat density mixed in while scoring, lest one stray point set the width for all."""
 _ATOM: Final = 0.05
@@ -118,13 +124,9 @@ def sample_range(values: FloatArray, weights: FloatArray, low: float, high: floa
     shares = np.array([_STRAY_WEIGHT, 0.01, 0.1, 0.9, 0.99, 1.0 - _STRAY_WEIGHT])
     first, one, ten, ninety, ninety_nine, last = weighted_quantile(values, weights, shares).tolist()
     near, room = 0.01 * (last - first), 0.08 * (last - first)
-    if first - low < near:
-        start = low
-    else:
-        start = first if one - first <= _CUT_OFF * (ten - one) else max(low, first - room)
-    if high - last < near:
-        return start, high
-    return start, last if last - ninety_nine <= _CUT_OFF * (ninety_nine - ninety) else min(high, last + room)
+    start = first if one - first <= _CUT_OFF * (ten - one) else max(low, first - room)
+    stop = last if last - ninety_nine <= _CUT_OFF * (ninety_nine - ninety) else min(high, last + room)
+    return (low if first - low < near else start), (high if high - last < near else stop)
 
 
 def estimate(
@@ -154,31 +156,43 @@ def estimate(
     cells = cells or CELLS[dimension]
     edges = tuple(np.linspace(low, high, cells + 1) for low, high in ranges)
     places = [(values[:, k] - low) * (cells / (high - low)) for k, (low, high) in enumerate(ranges)]
-    inside = (weights > _NEGLIGIBLE * weights.max()) & np.logical_and.reduce([(place >= -1e-9) & (place <= cells + 1e-9) for place in places])
+    inside = weights > _NEGLIGIBLE * weights.max()
+    inside &= np.logical_and.reduce([(place >= -1e-9) & (place <= cells + 1e-9) for place in places])
     points, kept = _distinct(np.column_stack([place[inside] for place in places]), weights[inside])
-    size = effective_size(kept)
-    atoms = _in_atom(points, kept)
     x, y = points[:, 0], points[:, 1] if dimension == 2 else np.full(len(points), 0.5)
     shape = (cells, cells if dimension == 2 else 1)
-    smoothed, spread = _cross_validated(x, y, np.where(atoms, 0.0, kept), size, shape)
+    atoms = _in_atom(points, kept)
+    held = Cells.of(x[atoms], y[atoms], kept[atoms], shape).mass
+    free = ~atoms
+    # Points per unit of weight: a single value, however heavy, says nothing of how well the rest is sampled.
+    size = effective_size(kept[free]) / kept[free].sum() if free.any() else 1.0
+    smoothed, spread = np.zeros(shape), np.zeros(2)
+    if free.any():
+        smoothed, spread = _cross_validated(x[free], y[free], kept[free], size * float(kept[free].sum()), shape)
     steps = [float(edge[1] - edge[0]) for edge in edges]
-    mass = Cells.of(x, y, kept, shape).mass
-    held = Cells.of(x, y, np.where(atoms, kept, 0.0), shape).mass
+    whole = (cells,) * dimension
     return Density(
         edges,
-        mass.reshape((cells,) * dimension),
-        (smoothed + held).reshape((cells,) * dimension) / np.prod(steps),
+        Cells.of(x, y, kept, shape).mass.reshape(whole),
+        (smoothed + held).reshape(whole) / np.prod(steps),
         tuple(float(width * step) for width, step in zip(spread, steps, strict=False)),
         size,
     )
 
 
-def _cross_validated(x: FloatArray, y: FloatArray, weights: FloatArray, size: float, shape: tuple[int, int]) -> tuple[FloatArray, FloatArray]:
+def _cross_validated(
+    x: FloatArray, y: FloatArray, weights: FloatArray, size: float, shape: tuple[int, int]
+) -> tuple[FloatArray, FloatArray]:
+    """Smoothed weight in each cell, and the median width of the kernels along both axes, in cells.
+
+    Every trial is drawn with all kernels, and scored in every cell by the logarithm of the density that the others
+    give to it. Around each kernel the mean score of the points near it decides. Its error has two parts: the scatter
+    of the scores, and the Poisson noise of the number of points that judge, which raises or lowers all their scores
+    together.
+    """
     dimension = 1 if shape[1] == 1 else 2
     larger = max(shape[0] // _WINDOW_CELLS[dimension], 1)
     fine, middle, coarse = (_cells(x, y, weights, shape, factor) for factor in (1, max(larger // 2, 1), larger))
-    if not fine.mass.any():
-        return fine.mass, np.zeros(2)
     power = 1.0 / (dimension + 4)
     unit = size ** (4.0 * power)
     rule_of_thumb = [_spread(place, weights) / larger * size**-power for place in (x, y)]
@@ -191,18 +205,19 @@ def _cross_validated(x: FloatArray, y: FloatArray, weights: FloatArray, size: fl
     shapes, scores = [], []
     for count, width in _TRIALS:
         shapes.append(width**2 * windows.covariance(count * unit))
-        smoothed, central = smooth(middle.mass, filled, _rescaled(shapes[-1][:, own], larger // max(larger // 2, 1), dimension), reflect)
+        kernels = _rescaled(shapes[-1][:, own], larger // max(larger // 2, 1), dimension)
+        smoothed, central = smooth(middle.mass, filled, kernels, reflect)
         left_out = np.maximum(smoothed.ravel()[filled] - central * squares / mass, 0.0)
         score = np.log((1.0 - _BACKGROUND) * left_out + _BACKGROUND * flat)
         scores.append(np.bincount(own, mass * score) / coarse_mass)
     gain, error = windows.average(np.array(scores) - scores[0], _JUDGES * unit)
     best, every = np.argmax(gain, axis=0), np.arange(gain.shape[1])
-    smoothest = np.argmax(gain >= gain[best, every] - _CONFIDENCE * error[best, every], axis=0)
+    smoothest = np.argmax(gain >= gain[best, every] - _CONFIDENCE[dimension] * error[best, every], axis=0)
     # Neighbours share their choice: where wide kernels met narrow ones, the density would seem to have an edge.
     choice = windows.average(smoothest[np.newaxis].astype(float), _SHARED * unit)[0][0]
     lower = np.minimum(choice.astype(np.intp), len(_TRIALS) - 2)
-    share, kernels = choice - lower, np.array(shapes)
-    covariance = (1.0 - share) * kernels[lower, :, every].T + share * kernels[lower + 1, :, every].T
+    share, tried = choice - lower, np.array(shapes)
+    covariance = (1.0 - share) * tried[lower, :, every].T + share * tried[lower + 1, :, every].T
     filled, own = _filled(fine, coarse)
     covariance = _rescaled(covariance[:, own], larger, dimension)
     smoothed, _ = smooth(fine.mass, filled, covariance, reflect)
@@ -226,7 +241,8 @@ def _filled(fine: Cells, coarse: Cells) -> tuple[NDArray[np.intp], NDArray[np.in
 
 def _rescaled(covariance: FloatArray, factor: int, dimension: int) -> FloatArray:
     """Covariance in cells that are `factor` times smaller; no width across a single column."""
-    return covariance * (float(factor) ** 2 * np.array([1.0, 1.0, 1.0] if dimension == 2 else [1.0, 0.0, 0.0]))[:, np.newaxis]
+    kept = np.array([[1.0], [1.0], [1.0]] if dimension == 2 else [[1.0], [0.0], [0.0]])
+    return np.asarray(float(factor) ** 2 * kept * covariance)
 
 
 def _spread(values: FloatArray, weights: FloatArray) -> float:

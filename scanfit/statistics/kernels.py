@@ -1,15 +1,10 @@
-"""Gaussian kernels that follow the points: wide where these are sparse, and drawn out along bands.
+"""Sums of Gaussian kernels, each with its own covariance, on a grid.
 
-The shape of a kernel is the covariance of the points around it, seen through a Gaussian window that is widened until
-it holds a given number of them: the nearest-neighbour form of a sample-point kernel (Breiman, Meisel and Purcell,
-Technometrics 19 (1977) 135; its width goes with density^(-1/2) in two dimensions, the law of Abramson, Ann. Statist.
-10 (1982) 1217). Everything works on binned points; one dimension is a grid with a single column.
+One dimension is a grid with a single column.
 """
 
 from __future__ import annotations
 
-from collections.abc import Sequence
-from dataclasses import dataclass
 from typing import Final
 
 import numpy as np
@@ -19,228 +14,12 @@ from scipy.ndimage import zoom
 
 from scanfit.priors import FloatArray
 
-_WIDEST: Final = 1.5
-"""Widest window in units of the rule of thumb for a normal density: no window reaches from one mode to the next."""
-_GROWTH: Final = 2.0
-"""Variance of a window in units of that of the points in the one before."""
-_MOST_STEPS: Final = 16
-_SEEN: Final = 3.0
-"""Standard deviations at which a window ends."""
-_NARROWEST_WINDOW: Final = 1.0
-"""Narrowest window in cells of the grid that the windows work on."""
-_NARROWEST_KERNEL: Final = 0.6
-"""Added in quadrature to every kernel, in cells: a narrower one would show the grid."""
-_CUT: Final = 4.0
-"""Standard deviations at which a kernel is cut off."""
+_NARROWEST: Final = 0.6
+"""Added in quadrature to the width of every kernel, in cells: a narrower one would show the grid."""
 _WIDE: Final = 4.0
 """Standard deviation in cells above which a kernel may as well be drawn on cells of twice the size."""
-_UNCERTAIN: Final = 8.0
-"""Number of points up to which their covariance is distrusted, and pulled towards that of the window."""
-
-
-@dataclass(frozen=True)
-class Cells:
-    """Points in the cells of a grid, with their moments.
-
-    Parameters
-    ----------
-    shape : (int, int)
-        Of the grid.
-    moments : ndarray, shape (6, *shape)
-        Sums of w, w x, w y, w x^2, w x y and w y^2, positions in cells from the grid's corner.
-    squares : ndarray, shape `shape`
-        Sums of w^2.
-    """
-
-    shape: tuple[int, int]
-    moments: FloatArray
-    squares: FloatArray
-
-    @classmethod
-    def of(cls, x: FloatArray, y: FloatArray, weights: FloatArray, shape: tuple[int, int]) -> Cells:
-        """Sort points into cells; positions in cells, already inside the grid."""
-        column, row = (
-            np.clip(place.astype(np.intp), 0, size - 1) for place, size in zip((x, y), shape, strict=True)
-        )
-        index, total = column * shape[1] + row, shape[0] * shape[1]
-        powers = (weights, weights * x, weights * y, weights * x * x, weights * x * y, weights * y * y)
-        moments = np.array([np.bincount(index, power, minlength=total) for power in powers])
-        squares = np.bincount(index, np.square(weights), minlength=total)
-        return cls(shape, moments.reshape(6, *shape), squares.reshape(shape))
-
-    @property
-    def mass(self) -> FloatArray:
-        """Weight in each cell."""
-        return np.asarray(self.moments[0])
-
-
-class Windows:
-    """Count and covariance of the points around each filled cell, through Gaussian windows that grow along them.
-
-    Each window is twice as large as the one before and has the shape of the points that were seen in that: on a band
-    it grows along the band and does not reach across to what lies beside it.
-
-    Parameters
-    ----------
-    cells : Cells
-        The points.
-    rule_of_thumb : pair of float
-        Kernel width for a normal density along each axis, in cells.
-    most : float
-        Number of points at which a window stops to grow.
-    """
-
-    def __init__(self, cells: Cells, rule_of_thumb: Sequence[float], most: float) -> None:
-        self._cells, self._places = cells, np.flatnonzero(cells.mass)
-        limit = np.square(_WIDEST * np.maximum(np.asarray(rule_of_thumb, dtype=float), _NARROWEST_WINDOW))
-        number = len(self._places)
-        window = np.repeat(np.array([[1.0], [0.0], [1.0]]) * _NARROWEST_WINDOW**2, number, axis=1)
-        growing = np.arange(number)
-        windows, counts, shapes = [], [], []
-        count, shape = np.zeros(number), window.copy()
-        for _ in range(_MOST_STEPS):
-            count, shape = count.copy(), shape.copy()
-            count[growing], shape[:, growing] = self._seen(growing, window[:, growing])
-            windows.append(window)
-            counts.append(count)
-            shapes.append(shape)
-            small = np.maximum(window[0] / limit[0], window[2] / limit[1]) < 1.0
-            growing = np.flatnonzero(small & (count < most))
-            if len(growing) == 0:
-                break
-            window = window.copy()
-            window[:, growing] = self._grown(window[:, growing], shape[:, growing])
-        self._windows, self._counts, self._shapes = np.array(windows), np.array(counts), np.array(shapes)
-
-    def _grown(self, window: FloatArray, shape: FloatArray) -> FloatArray:
-        """Windows of twice the area with the shape of the points; in one dimension, of twice the variance."""
-        if self._cells.shape[1] == 1:
-            return np.asarray(window * np.array([[_GROWTH], [1.0], [1.0]]))
-        seen = shape + np.array([[_NARROWEST_KERNEL**2], [0.0], [_NARROWEST_KERNEL**2]])
-        size, seen_size = (kind[0] * kind[2] - np.square(kind[1]) for kind in (window, seen))
-        return np.asarray(_GROWTH * np.sqrt(size / seen_size) * seen)
-
-    def _seen(self, which: NDArray[np.intp], window: FloatArray) -> tuple[FloatArray, FloatArray]:
-        """Effective number of points in windows and their covariance xx, xy, yy."""
-        moments = np.moveaxis(self._cells.moments, 0, -1)
-        sums, squares, flat = self._look(moments, self._cells.squares[..., np.newaxis], which, window)
-        x, y, xx, xy, yy = sums[:, 1:].T / sums[:, 0]
-        count = np.square(sums[:, 0]) / squares[:, 0]
-        shape = np.array([np.maximum(xx - x * x, 0.0), xy - x * y, np.maximum(yy - y * y, 0.0)])
-        # A window that sticks out of the grid sees less, and that narrower, than it would of the same density inside.
-        share, narrow_x, narrow_y = flat.T
-        shape /= np.array([narrow_x, np.sqrt(narrow_x * narrow_y), narrow_y])
-        distrust = _UNCERTAIN / (_UNCERTAIN + count)
-        return count / share, (1.0 - distrust) * shape + distrust * window
-
-    def _look(
-        self, linear: FloatArray, square: FloatArray, which: NDArray[np.intp], window: FloatArray
-    ) -> tuple[FloatArray, FloatArray, FloatArray]:
-        column, row = np.unravel_index(self._places[which], self._cells.shape)
-        return _look_through_windows(  # type: ignore[no-any-return]  # numba has no types
-            np.ascontiguousarray(linear), np.ascontiguousarray(square), self._cells.mass, column, row, *window, _SEEN
-        )
-
-    def covariance(self, count: float) -> FloatArray:
-        """Covariance xx, xy, yy around each filled cell, in the window that holds `count` points; shape (3, n).
-
-        Between two windows the covariance is interpolated; the widest window is taken where none holds enough.
-        """
-        upper = self._first_to_hold(count)
-        lower, column = np.maximum(upper - 1, 0), np.arange(len(upper))
-        few, many = self._counts[lower, column], self._counts[upper, column]
-        share = np.clip(np.log(count / few) / np.log(np.maximum(many / few, 1.0 + 1e-9)), 0.0, 1.0)
-        return np.asarray(
-            ((1.0 - share)[:, np.newaxis] * self._shapes[lower, :, column]
-             + share[:, np.newaxis] * self._shapes[upper, :, column]).T
-        )  # fmt: skip
-
-    def average(self, values: FloatArray, count: float) -> tuple[FloatArray, FloatArray]:
-        """Weighted mean of values around each filled cell, in the window that holds `count` points, and its error.
-
-        Parameters
-        ----------
-        values : ndarray, shape (m, n)
-            Several values at each filled cell.
-        count : float
-            Points in the window.
-        """
-        level, every = self._first_to_hold(count), np.arange(len(self._places))
-        number = len(values)
-        mass, squares = self._cells.mass.ravel()[self._places], self._cells.squares.ravel()[self._places]
-        linear = self._spread_out(np.vstack([mass, mass * values]))
-        square = self._spread_out(np.vstack([squares, squares * values, squares * np.square(values)]))
-        sums, second, _ = self._look(linear, square, every, self._windows[level, :, every].T)
-        mean = sums[:, 1:].T / sums[:, 0]
-        rest = second[:, 1 + number :].T + mean * (mean * second[:, 0] - 2.0 * second[:, 1 : 1 + number].T)
-        scatter = np.maximum(rest, 0.0) / np.square(sums[:, 0])
-        return mean, np.sqrt(scatter + 1.0 / self._counts[level, every])
-
-    def _spread_out(self, values: FloatArray) -> FloatArray:
-        grid = np.zeros((self._cells.mass.size, len(values)))
-        grid[self._places] = values.T
-        return grid.reshape(*self._cells.shape, len(values))
-
-    def _first_to_hold(self, count: float) -> NDArray[np.intp]:
-        enough = self._counts >= count
-        return np.where(enough.any(axis=0), np.argmax(enough, axis=0), len(enough) - 1)
-
-
-@njit(cache=True, fastmath=False, error_model="numpy")
-def _look_through_windows(
-    linear: FloatArray, square: FloatArray, mass: FloatArray, column: NDArray[np.intp], row: NDArray[np.intp],
-    xx: FloatArray, xy: FloatArray, yy: FloatArray, cut: float,
-) -> tuple[FloatArray, FloatArray, FloatArray]:  # fmt: skip
-    """Sum fields over Gaussian windows with given centres and covariances, all in cells.
-
-    Returns the sums of `linear` times the window, of `square` times its square, and what the window sees of a flat
-    density: the share of its mass inside the grid and of its variances along the axes.
-    """
-    first, second = np.zeros((len(column), linear.shape[2])), np.zeros((len(column), square.shape[2]))
-    flat = np.ones((len(column), 3))
-    for k in range(len(column)):
-        slope = xy[k] / xx[k]
-        spread = np.sqrt(yy[k] - xy[k] * slope)
-        decay = np.exp(-1.0 / spread**2)
-        reach = int(np.ceil(cut * np.sqrt(xx[k])))
-        height = int(np.ceil(cut * np.sqrt(yy[k])))
-        inside = column[k] >= reach and column[k] + reach < mass.shape[0]
-        inside = inside and (mass.shape[1] == 1 or (row[k] >= height and row[k] + height < mass.shape[1]))
-        total = x = y = x_square = y_square = 0.0
-        for i in range(max(0, column[k] - reach), min(mass.shape[0], column[k] + reach + 1)):
-            offset = i - column[k]
-            middle = row[k] + slope * offset
-            outer = np.exp(-0.5 * offset**2 / xx[k])
-            low = max(0, int(np.ceil(middle - cut * spread)))
-            # Values of a Gaussian at equal steps follow from their ratios, which fall by a constant factor.
-            following = outer * np.exp(-0.5 * ((low - middle) / spread) ** 2)
-            ratio = np.exp(-(low - middle + 0.5) / spread**2)
-            for j in range(low, min(mass.shape[1], int(np.floor(middle + cut * spread)) + 1)):
-                seen = following
-                following *= ratio
-                ratio *= decay
-                if inside and mass[i, j] == 0.0:
-                    continue
-                if not inside:
-                    total += seen
-                    x += seen * offset
-                    x_square += seen * offset**2
-                    y += seen * (j - row[k])
-                    y_square += seen * (j - row[k]) ** 2
-                    if mass[i, j] == 0.0:
-                        continue
-                for field in range(linear.shape[2]):
-                    first[k, field] += seen * linear[i, j, field]
-                for field in range(square.shape[2]):
-                    second[k, field] += seen * seen * square[i, j, field]
-        if not inside:
-            if mass.shape[1] > 1:
-                flat[k, 0] = min(1.0, total / (2.0 * np.pi * np.sqrt(xx[k]) * spread))
-                flat[k, 2] = min(1.0, max((y_square - y * y / total) / total + 1.0 / 12.0, 0.1 * yy[k]) / yy[k])
-            else:
-                flat[k, 0] = min(1.0, total / np.sqrt(2.0 * np.pi * xx[k]))
-            flat[k, 1] = min(1.0, max((x_square - x * x / total) / total + 1.0 / 12.0, 0.1 * xx[k]) / xx[k])
-    return first, second, flat
+_CUT: Final = 4.0
+"""Standard deviations at which a kernel is cut off."""
 
 
 def smooth(
@@ -273,7 +52,7 @@ def smooth(
     kernels there are set upright, with the width that they have along lines parallel to the axes.
     """
     x, y = (index + 0.5 for index in np.unravel_index(places, mass.shape))
-    xx, xy, yy = covariance[0] + _NARROWEST_KERNEL**2, covariance[1].copy(), covariance[2] + _NARROWEST_KERNEL**2
+    xx, xy, yy = covariance[0] + _NARROWEST**2, covariance[1].copy(), covariance[2] + _NARROWEST**2
     near = [
         active & (np.minimum(place, size - place) < _CUT * np.sqrt(variance))
         for active, place, size, variance in zip(reflect, (x, y), mass.shape, (xx, yy), strict=True)
@@ -291,19 +70,20 @@ def _sum_of_kernels(sources: FloatArray, shape: tuple[int, int], reflect: tuple[
     across = sources[3] - np.square(sources[4]) / sources[5]
     along = sources[5] - np.square(sources[4]) / sources[3] if shape[1] > 1 else across
     wide = np.minimum(across, along) > _WIDE**2
-    coarse = np.zeros(shape)
+    summed = np.zeros(shape)
     if wide.any() and shape[0] > 2 * _WIDE:
         half = (shape[0] // halved[0], shape[1] // halved[1])
         scale = np.array([halved[0], halved[1], 1.0, halved[0] ** 2, halved[0] * halved[1], halved[1] ** 2])
         merged = _merge(sources[:, wide] / scale[:, np.newaxis], half)
-        coarse = zoom(_sum_of_kernels(merged, half, reflect), halved, order=3, mode="grid-mirror", grid_mode=True)
-        coarse /= halved[0] * halved[1]
+        drawn = _sum_of_kernels(merged, half, reflect) / (halved[0] * halved[1])
+        summed = np.asarray(zoom(drawn, halved, order=3, mode="grid-mirror", grid_mode=True))
         sources = sources[:, ~wide]
     for axis in range(2):
         if reflect[axis]:
             sources = np.hstack([sources, *_images(sources, axis, shape[axis])])
-    _add_kernels(coarse, *np.ascontiguousarray(sources), _CUT)
-    return np.maximum(coarse, 0.0)
+    x, y, mass, xx, xy, yy = np.ascontiguousarray(sources)
+    _add_kernels(summed, x, y, mass, xx, xy, yy, _CUT)
+    return np.maximum(summed, 0.0)
 
 
 def _merge(sources: FloatArray, shape: tuple[int, int]) -> FloatArray:
@@ -312,8 +92,7 @@ def _merge(sources: FloatArray, shape: tuple[int, int]) -> FloatArray:
     mass = np.bincount(index, sources[2])
     filled = np.flatnonzero(mass)
     means = [np.bincount(index, sources[2] * row)[filled] / mass[filled] for row in sources]
-    means[2] = mass[filled]
-    return np.array(means)
+    return np.array([*means[:2], mass[filled], *means[3:]])
 
 
 def _images(sources: FloatArray, axis: int, size: int) -> list[FloatArray]:
@@ -353,6 +132,7 @@ def _add_kernels(
             middle = y[k] + slope * offset
             first = max(0, int(np.ceil(middle - cut * spread - 0.5)))
             last = min(grid.shape[1], int(np.floor(middle + cut * spread + 0.5)))
+            # Values of a Gaussian at equal steps follow from their ratios, which fall by a constant factor.
             start = first + 0.5 - middle
             value = scale * np.exp(-0.5 * (offset**2 / xx[k] + (start / spread) ** 2))
             ratio = np.exp(-(start + 0.5) / spread**2)

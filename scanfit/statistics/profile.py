@@ -111,10 +111,8 @@ def profile(points: pd.DataFrame, axes: tuple[Axis, ...], archive: Archive | Non
     found = np.where(best >= 0, rows[best], -1)
     places = tuple(np.where(best >= 0, values[best], np.nan) for values in scaled)
     everywhere = [to_scale(column[archive.order_with_zeros], axis) for column, axis in zip(columns, axes, strict=True)]
-    near_places = to_scale(columns[0][near], axes[0])
-    return Profile(
-        axes, grid, found, places, archive.two_delta(found), grid.count(everywhere), (near_places, archive.two_delta(near))
-    )
+    near_points = (to_scale(columns[0][near], axes[0]), archive.two_delta(near))
+    return Profile(axes, grid, found, places, archive.two_delta(found), grid.count(everywhere), near_points)
 
 
 def profile_intervals(curve: Profile, level: float) -> list[Interval]:
@@ -142,8 +140,7 @@ def profile_intervals(curve: Profile, level: float) -> list[Interval]:
     index = np.arange(len(drop), dtype=float)
     found: list[Interval] = []
     for low, high in intervals_below(np.sqrt(drop), np.sqrt(threshold)):
-        gap = drop[int(np.floor(found[-1][1])) + 1 : int(np.ceil(low))] if found else np.array([np.inf])
-        if gap.max(initial=0.0) < threshold + GAP or (found and _expected(curve, threshold, found[-1][1], low) < EXPECTED):
+        if found and not _is_gap(curve, threshold, found[-1][1], low):
             low = found.pop()[0]
         found.append((low, high))
     # Beside an empty cell, and at the window's ends, the cell's own edge is all that is known.
@@ -158,23 +155,26 @@ def profile_intervals(curve: Profile, level: float) -> list[Interval]:
     return [(float(from_scale(np.array(low), axis)), float(from_scale(np.array(high), axis))) for low, high in ends]
 
 
-def _expected(curve: Profile, threshold: float, start: float, stop: float) -> float:
-    """Number of points within the threshold to expect in the gap between two intervals, given as fractional cells.
+def _is_gap(curve: Profile, threshold: float, start: float, stop: float) -> bool:
+    """Whether the likelihood is known to be worse between two intervals, given as fractional cells.
 
-    Two estimates from the stretches beside the gap, as wide as the gap: the number of points within the threshold
-    there, and their share of all points there times the number of points tried in the gap. The worse side counts, and
-    the larger estimate: a gap is known either because points were found on both sides and not between, or because the
-    search went there in vain.
+    Two estimates are made of the number of points within the threshold to expect there, from the stretches beside
+    the gap, as wide as the gap: the number of such points, and their share of all points tried there times the number
+    of points tried in the gap. The worse side counts, and the larger estimate: a gap is known either because points
+    were found on both sides and not between, or because the search went there in vain.
     """
     edges, cells = curve.grid.edges[0], len(curve.two_delta)
     first, last = int(np.floor(start)) + 1, int(np.ceil(stop))  # the cells of the gap
+    drop = curve.two_delta[first:last]
+    if np.where(np.isnan(drop), np.inf, drop).max(initial=0.0) < threshold + GAP:
+        return False
     width = max(last - first, 1)
     place, drop = curve.near
     good = np.histogram(place[drop <= threshold], edges)[0]
     beside = [slice(max(first - width, 0), first), slice(last, min(last + width, cells))]
     found = [float(good[side].sum()) for side in beside]
     share = [number / max(int(curve.tried[side].sum()), 1) for number, side in zip(found, beside, strict=True)]
-    return max(min(found), min(share) * int(curve.tried[first:last].sum()))
+    return max(min(found), min(share) * int(curve.tried[first:last].sum())) >= EXPECTED
 
 
 def profile_table(

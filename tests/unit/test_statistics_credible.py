@@ -124,7 +124,10 @@ def test_thin_band_is_not_smeared():
     x = rng.normal(size=5000)
     region = credible_region(x, np.square(x) + 0.05 * rng.normal(size=5000), np.ones(5000), (LINEAR, LINEAR))
     assert region is not None
-    assert max(region.density.bandwidth) < 0.1
+    cell = np.prod([edge[1] - edge[0] for edge in region.density.edges])
+    # A sheared normal density: its areas are known. The band is thinner than a cell, so some widening is due to these.
+    expected = np.pi * stats.chi2.ppf(LEVELS["68"], 2) * 0.05
+    assert np.count_nonzero(region.density.height >= region.heights["68"]) * cell < 1.5 * expected
 
 
 def test_density_is_normalised_and_keeps_its_mass():

@@ -71,6 +71,40 @@ def test_two_modes_give_two_intervals():
     assert found == [pytest.approx((-6.0, -4.0), abs=0.05), pytest.approx((4.0, 6.0), abs=0.05)]
 
 
+def sparse_tail(seed, hole=False):
+    """Likelihood flat over six decades of which the search visits the lowest ones ever more rarely; with `hole`, bad
+    from -3 to -2."""
+    x = -np.random.default_rng(seed).exponential(0.75, 4000)
+    x = x[x > -6.0]
+    value = np.where(hole & (x > -3.0) & (x < -2.0), -8.0, -0.2 * np.random.default_rng(seed + 50).random(len(x)))
+    return pd.DataFrame({"b": 10.0**x, "status": 0.0, "loglike_t": value, "log_likelihood": value})
+
+
+@pytest.mark.parametrize("seed", range(8))
+def test_gaps_of_a_sparse_search_are_no_gaps(seed):
+    frame = sparse_tail(seed)
+    curve = profile(frame, (AXES["b"],))
+    assert len(profile_intervals(curve, LEVELS["95"])) == 1
+
+
+@pytest.mark.parametrize("seed", range(4))
+def test_control_gap_that_was_searched_stays(seed):
+    """The same search, with a valley that it visited often enough to know."""
+    found = profile_intervals(profile(sparse_tail(seed, hole=True), (AXES["b"],)), LEVELS["95"])
+    assert len(found) == 2
+    assert np.log10([found[0][1], found[1][0]]) == pytest.approx([-3.0, -2.0], abs=0.25)
+
+
+@pytest.mark.parametrize("size", [300, 3000, 30_000])
+def test_control_two_modes_stay_apart(size):
+    """As an explorer finds them, with few points between."""
+    rng = np.random.default_rng(size)
+    x = np.where(rng.random(size) < 0.3, rng.normal(-4.0, 1.5, size), rng.normal(4.0, 1.5, size))
+    value = np.logaddexp(stats.norm.logpdf(x, -4.0, 1.0), stats.norm.logpdf(x, 4.0, 1.0))
+    frame = pd.DataFrame({"a": x, "status": 0.0, "loglike_t": value, "log_likelihood": value})
+    assert len(profile_intervals(profile(frame, (AXES["a"],)), LEVELS["95"])) == 2
+
+
 def test_interval_reaches_the_bound():
     x = np.random.default_rng(3).uniform(0.0, 5.0, 20_000)
     frame = pd.DataFrame({"a": x, "status": 0.0, "loglike_t": -0.5 * x**2, "log_likelihood": -0.5 * x**2})
