@@ -96,7 +96,8 @@ def credible_intervals(density: Density, level: float, axis: Axis) -> list[Inter
 def inside_intervals(density: Density, level: float) -> NDArray[np.bool_]:
     """Cells of a one-dimensional density whose centres lie in its credible intervals, for shading."""
     grid = density.centres[0]
-    return np.logical_or.reduce([(grid >= low) & (grid <= high) for low, high in _scaled_intervals(density, level)])
+    parts = [(grid >= low) & (grid <= high) for low, high in _scaled_intervals(density, level)]
+    return np.asarray(np.logical_or.reduce(parts))
 
 
 def _scaled_intervals(density: Density, level: float) -> list[Interval]:
