@@ -191,7 +191,7 @@ SOURCES: Final[dict[str, DegreesOfFreedom]] = {
 
 
 def entropy_slope(temperature: FloatArray, source: str) -> FloatArray:
-    """d ln g_s/d ln T at temperatures in GeV, same shape."""
+    """Logarithmic slope d ln g_s/d ln T at temperatures in GeV, same shape."""
     g = SOURCES[source]
     temperature = np.asarray(temperature, dtype=float)
     h = 5e-4

@@ -70,7 +70,8 @@ def plasma_range(equation_of_state: str | Blend) -> tuple[float, float]:
 
 @lru_cache(maxsize=len(EQUATIONS_OF_STATE))
 def _logarithms(source: str) -> FloatArray:
-    """ln g_s, ln g_rho and d ln g_s/d ln T on the solver's grid, shape (n, 3)."""
+    """Columns ln g_s, ln g_rho and d ln g_s/d ln T on the solver's grid, shape (n, 3)."""
     temperature = solver_temperatures()
     g = SOURCES[source]
-    return np.column_stack([np.log(g.g_s(temperature)), np.log(g.g_rho(temperature)), entropy_slope(temperature, source)])
+    slope = entropy_slope(temperature, source)
+    return np.column_stack([np.log(g.g_s(temperature)), np.log(g.g_rho(temperature)), slope])

@@ -17,7 +17,6 @@ from scanfit.errors import PointError
 from ..candidate import Candidate
 from ..constants import OMEGA_H2_OBSERVED
 
-
 ErrorFlag = Literal[
     "narrow_resonance",
     "outside_degrees_of_freedom_table",

@@ -140,7 +140,7 @@ def check(file: Path, points: int, as_json: bool) -> None:
     started = time.perf_counter()
     batch = posterior.evaluate_many(sample)
     seconds = (time.perf_counter() - started) / points
-    found = {
+    found: dict[str, Any] = {
         "file": str(file),
         "model": posterior.model.name,
         "free_parameters": list(posterior.space.free_names),
