@@ -10,17 +10,21 @@ import math
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass, field
 from functools import cached_property
-from typing import Final, Literal
+from typing import ClassVar, Final, Literal, Self
 
 import numpy as np
+from pydantic import model_validator
 
-from scanfit.contracts import Quantity
-from scanfit.priors import FloatArray
+from scanfit.contracts import Detail, Quantity
+from scanfit.priors import Fixed, FloatArray
+from scanfit.space import Parameter
 from scanfit.validation import Options
 
 from .constants import GEV_M2_TO_CM2, GEV_M2_TO_CM3_S, NEUTRON_MASS, OMEGA_H2_OBSERVED, PROTON_MASS
 from .relic_abundance.degrees_of_freedom import EquationOfState
 from .relic_abundance.freeze_out import FreezeOut, freeze_out
+from .relic_abundance.plasma import Blend, other_source
+from .relic_abundance.thermal_detail import thermal_detail
 
 CHANNELS: Final = (
     "uu", "dd", "ss", "cc", "bb", "tt", "ee", "mumu", "tautau", "nunu", "gg", "WW", "ZZ", "hh", "Zh", "gammagamma",
@@ -39,7 +43,33 @@ class CosmologyOptions(Options):
     """Whether signals scale with the candidate's fraction f of the dark matter: rates f, annihilation f^2."""
     equation_of_state: EquationOfState = "arxiv-1803.01038"
     """Source of the primordial degrees of freedom; see `relic_abundance.degrees_of_freedom`."""
+    equation_of_state_alternative: EquationOfState | None = None
+    """Source towards which the nuisance `equation_of_state_shift` moves; by default the next one in the list."""
     omega_h2_observed: float = OMEGA_H2_OBSERVED
+
+    @model_validator(mode="after")
+    def _two_sources(self) -> Self:
+        if self.equation_of_state_alternative == self.equation_of_state:
+            raise ValueError("equation_of_state_alternative must differ from equation_of_state")
+        return self
+
+    def plasma(self, shift: float) -> str | Blend:
+        """Degrees of freedom with a share `shift` of the alternative source."""
+        if shift == 0.0:
+            return self.equation_of_state
+        second = self.equation_of_state_alternative or other_source(self.equation_of_state)
+        return Blend(self.equation_of_state, second, shift)
+
+
+EQUATION_OF_STATE_SHIFT: Final = Parameter(
+    "equation_of_state_shift",
+    "",
+    r"t_\mathrm{eos}",
+    Fixed(value=0.0),
+    kind="nuisance",
+    description="share of the alternative source of degrees of freedom: 0 is the chosen source, 1 the alternative",
+)
+"""Nuisance that every model may declare and hand on to its `Candidate`; fixed to 0 unless the run file frees it."""
 
 
 @dataclass(frozen=True)
@@ -116,6 +146,8 @@ class Candidate:
         Partial width of the Higgs boson into the dark sector in GeV; None when the model leaves the Higgs boson alone.
     cosmology : CosmologyOptions
         Treatment of the abundance.
+    equation_of_state_shift : float
+        See `EQUATION_OF_STATE_SHIFT`.
     own_flags : mapping
         The model's validity flags.
     own_quantities : mapping
@@ -130,8 +162,13 @@ class Candidate:
     mediator: SpinOneMediator | None = None
     higgs_invisible_width: float | None = None
     cosmology: CosmologyOptions = field(default_factory=CosmologyOptions)
+    equation_of_state_shift: float = 0.0
     own_flags: Mapping[str, bool] = field(default_factory=dict)
     own_quantities: Mapping[str, float] = field(default_factory=dict)
+
+    details: ClassVar[Mapping[str, str]] = {
+        "thermal": "freeze-out: temperature, yield and thermal average against x, and the spread of published plasmas"
+    }
 
     @cached_property
     def relic(self) -> FreezeOut:
@@ -141,7 +178,7 @@ class Candidate:
             degrees_of_freedom=self.spin_degrees_of_freedom,
             self_conjugate=self.self_conjugate,
             annihilation=self.annihilation,
-            equation_of_state=self.cosmology.equation_of_state,
+            equation_of_state=self.cosmology.plasma(self.equation_of_state_shift),
         )
 
     @property
@@ -196,6 +233,12 @@ class Candidate:
     def flags(self) -> dict[str, bool]:
         """Validity flags of the relic abundance and of the model."""
         return {**self.relic.flags, **self.own_flags}
+
+    def detail(self, name: str) -> Detail:
+        """Work out one of `details`; see `scanfit.contracts.Detailed`."""
+        if name != "thermal":
+            raise KeyError(name)
+        return thermal_detail(self)
 
 
 QUANTITIES: Final = (

@@ -68,6 +68,48 @@ class Prediction(Protocol):
         ...
 
 
+@dataclass(frozen=True)
+class Detail:
+    """More about one point than a row of the archive holds: numbers, one table of curves, and sentences.
+
+    Parameters
+    ----------
+    title : str
+        What it shows.
+    numbers : tuple of (Quantity, float)
+        Single values, in the order in which to show them.
+    curves : tuple of (Quantity, ndarray)
+        Columns of one table, all of shape (n,); the first is what the others are functions of.
+    notes : tuple of str
+        What a reader must know.
+    rows : tuple of int
+        Rows of the table worth printing, ascending; evenly spread ones are printed when there are none.
+    """
+
+    title: str
+    numbers: tuple[tuple[Quantity, float], ...] = ()
+    curves: tuple[tuple[Quantity, FloatArray], ...] = ()
+    notes: tuple[str, ...] = ()
+    rows: tuple[int, ...] = ()
+
+
+@runtime_checkable
+class Detailed(Protocol):
+    """A prediction that can tell details for people (``scanfit point --show NAME``). No prediction has to.
+
+    A plug-in of the entry-point group ``scanfit.drawings`` with the same name draws the detail.
+    """
+
+    @property
+    def details(self) -> Mapping[str, str]:
+        """Names of the details, each with one line that says what it shows."""
+        ...
+
+    def detail(self, name: str) -> Detail:
+        """Work out the detail called `name`, one of `details`."""
+        ...
+
+
 PredictionT = TypeVar("PredictionT", bound=Prediction)
 
 

@@ -9,6 +9,7 @@ import enum
 import math
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
+from typing import Final
 
 import numpy as np
 
@@ -26,6 +27,12 @@ class Status(enum.IntEnum):
     """The model or a term raised, or returned something that is not a log-likelihood: likelihood zero, counted."""
     TIMED_OUT = 2
     """Given up after the run file's time limit: likelihood zero, counted."""
+    REJECTED = 3
+    """A validity flag that the run file rejects is raised: likelihood zero, and nothing failed."""
+
+
+FAILURES: Final = (Status.FAILED, Status.TIMED_OUT)
+"""What counts as a point that could not be evaluated."""
 
 
 @dataclass(frozen=True)
@@ -66,19 +73,28 @@ class Posterior:
         Turns values into a prediction.
     terms : mapping of str to Term
         By the names that the run file gives them.
+    reject_flags : sequence of str
+        Validity flags of the model; where one is raised the likelihood is zero and no term is asked.
 
     Raises
     ------
     InputError
-        If two columns would share a name.
+        If two columns would share a name, or the model has no flag of a name in `reject_flags`.
     """
 
-    def __init__(self, space: Space, model: Model[Prediction], terms: Mapping[str, Term[Prediction]]) -> None:
+    def __init__(
+        self,
+        space: Space,
+        model: Model[Prediction],
+        terms: Mapping[str, Term[Prediction]],
+        reject_flags: Sequence[str] = (),
+    ) -> None:
         self.space = space
         self.model = model
         self.terms = dict(terms)
         self.quantities: tuple[Quantity, ...] = tuple(model.quantities)
         self.flag_names = tuple(model.flag_names)
+        self.reject_flags = _checked_flags(reject_flags, self.flag_names)
         self._in_order = sorted(self.terms.items(), key=lambda item: item[1].cost)
         self.term_columns = tuple(f"loglike_{name}" for name in self.terms)
         self.flag_columns = tuple(f"flag_{name}" for name in self.flag_names)
@@ -125,6 +141,8 @@ class Posterior:
     def evaluate(self, values: Mapping[str, float]) -> Batch:
         """Evaluate one point given by name, also outside the prior and with other values of fixed parameters.
 
+        The terms are asked even where a rejected flag is raised; the likelihood is zero all the same.
+
         Parameters
         ----------
         values : mapping
@@ -149,7 +167,11 @@ class Posterior:
         try:
             prediction = self.model.predict(values)
             total = 0.0
-            for name, term in self._in_order:
+            if self._rejects(prediction):
+                row[dimension + 2] = Status.REJECTED
+                total = -math.inf
+            asked = self._in_order if everywhere or total == 0.0 else ()
+            for name, term in asked:
                 culprit = f"terms.{name}"
                 loglike = float(term.loglike(prediction, values))
                 if math.isnan(loglike) or loglike == math.inf:
@@ -170,6 +192,12 @@ class Posterior:
         row[dimension + 1] = total
         return None
 
+    def _rejects(self, prediction: Prediction) -> bool:
+        if not self.reject_flags:
+            return False
+        flags = prediction.flags()
+        return any(flags[name] for name in self.reject_flags)
+
     def explain(self, values: Mapping[str, float]) -> dict[str, Sequence[Observable]]:
         """Predicted beside observed for every term at one point; exceptions pass through.
 
@@ -180,3 +208,11 @@ class Posterior:
         """
         prediction = self.model.predict(values)
         return {name: term.explain(prediction, values) for name, term in self.terms.items()}
+
+
+def _checked_flags(wanted: Sequence[str], known: Sequence[str]) -> tuple[str, ...]:
+    unknown = [name for name in wanted if name not in known]
+    if unknown:
+        rule = "the model has no validity flag of this name"
+        raise InputError([Problem("run.reject_flags", rule, name, known) for name in unknown])
+    return tuple(wanted)

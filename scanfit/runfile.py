@@ -31,6 +31,8 @@ class RunSection(Options):
     """How terms remove the nuisances that they keep to themselves."""
     failed_fraction_maximum: float = Field(default=0.2, gt=0.0, le=1.0)
     """The scan stops when more than this fraction of its points (of 200 at least) cannot be evaluated."""
+    reject_flags: tuple[str, ...] = ()
+    """Validity flags of the model that make a cut: where one is raised the likelihood is zero."""
 
 
 class ComputeSection(Options):
@@ -163,7 +165,8 @@ def load(path: Path) -> RunFile:
     posterior = None
     if model is not None and len(terms) == len(skeleton.terms):
         with findings.collect("parameters"):
-            posterior = Posterior(_space(model, terms, skeleton.parameters), model, terms)
+            space = _space(model, terms, skeleton.parameters)
+            posterior = Posterior(space, model, terms, skeleton.run.reject_flags)
             _check_planes(skeleton.figures, posterior)
     if findings.problems:
         raise InputError(findings.problems, str(path))

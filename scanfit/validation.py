@@ -79,7 +79,8 @@ def problems_in(error: ValidationError, schema: type[BaseModel], where: str = ""
     """Translate pydantic's findings into problems with path, rule, value and choices."""
     problems = []
     for item in error.errors(include_url=False):
-        location = [str(part) for part in item["loc"]]
+        # pydantic marks a wrong key of a mapping by one more step.
+        location = [str(part) for part in item["loc"] if part != "[key]"]
         path = ".".join(([where] if where else []) + location)
         kind, given, context = item["type"], item.get("input"), item.get("ctx", {})
         if kind == "extra_forbidden":

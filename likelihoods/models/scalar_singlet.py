@@ -16,7 +16,14 @@ from scanfit.errors import PointError
 from scanfit.priors import Normal
 from scanfit.space import Parameter
 
-from ..candidate import QUANTITIES, Annihilation, Candidate, CosmologyOptions, NucleonCouplings
+from ..candidate import (
+    EQUATION_OF_STATE_SHIFT,
+    QUANTITIES,
+    Annihilation,
+    Candidate,
+    CosmologyOptions,
+    NucleonCouplings,
+)
 from ..constants import HIGGS_MASS, HIGGS_VEV, NEUTRON_MASS, PROTON_MASS, TAU_MASS, TOP_MASS, W_MASS, Z_MASS
 from ..higgs_width import (
     BOTTOM_POLE_MASS,
@@ -67,6 +74,7 @@ class ScalarSinglet(Model[Candidate]):
             kind="nuisance",
             description="coupling of the Higgs boson to a nucleon in units of m_N/v, arXiv:1708.02245",
         ),
+        EQUATION_OF_STATE_SHIFT,
     )
     quantities = (
         *QUANTITIES,
@@ -117,6 +125,7 @@ class ScalarSinglet(Model[Candidate]):
             nucleon=NucleonCouplings(f_proton=contact * PROTON_MASS, f_neutron=contact * NEUTRON_MASS),
             higgs_invisible_width=invisible,
             cosmology=self._options,
+            equation_of_state_shift=float(values.get("equation_of_state_shift", 0.0)),
             own_flags={
                 "strong_coupling": abs(portal) > 4.0 * math.pi,
                 "negative_bare_mass": 0.5 * portal * HIGGS_VEV**2 > mass**2,

@@ -20,6 +20,7 @@ from scanfit.space import Parameter
 
 from ..candidate import (
     DWARF_VELOCITY,
+    EQUATION_OF_STATE_SHIFT,
     QUANTITIES,
     Annihilation,
     Candidate,
@@ -43,6 +44,7 @@ _MODEL_PARAMETERS: Final[tuple[Parameter, ...]] = (
     Parameter("g_quark", "", "g_q", description="coupling of the mediator to every quark"),
     Parameter("g_dark", "", r"g_\chi", description="coupling of the mediator to dark matter"),
     Parameter("g_lepton", "", r"g_\ell", Fixed(value=0.0), description="coupling of the mediator to every lepton"),
+    EQUATION_OF_STATE_SHIFT,
 )
 
 _AXIAL_CHARGES: Final = tuple(
@@ -131,6 +133,7 @@ class SpinOneMediatorModel(Model[Candidate]):
             nucleon=self._nucleon_couplings(values, g_dark * g_quark / mediator_mass**2),
             mediator=mediator,
             cosmology=self._options,
+            equation_of_state_shift=float(values.get("equation_of_state_shift", 0.0)),
             own_flags=self._flags(mediator, mass, annihilation),
             own_quantities={
                 "mediator_width_ratio": width / mediator_mass,

@@ -190,8 +190,8 @@ SOURCES: Final[dict[str, DegreesOfFreedom]] = {
 """All sources by name. For the last no range was at hand; the one given is where its steps lie."""
 
 
-def g_star_sqrt(temperature: FloatArray, source: str) -> FloatArray:
-    """g*^(1/2) at temperatures in GeV, same shape, the slope of g_s included."""
+def entropy_slope(temperature: FloatArray, source: str) -> FloatArray:
+    """Logarithmic slope d ln g_s/d ln T at temperatures in GeV, same shape."""
     g = SOURCES[source]
     temperature = np.asarray(temperature, dtype=float)
     h = 5e-4
@@ -201,7 +201,14 @@ def g_star_sqrt(temperature: FloatArray, source: str) -> FloatArray:
         distance = centre - edge
         centre = np.where(np.abs(distance) < 2.01 * h, edge + np.copysign(2.01 * h, distance), centre)
     nearby = [np.log(g.g_s(np.exp(centre + k * h))) for k in (-2, -1, 1, 2)]
-    slope = (nearby[0] - 8.0 * nearby[1] + 8.0 * nearby[2] - nearby[3]) / (12.0 * h)
+    return np.asarray((nearby[0] - 8.0 * nearby[1] + 8.0 * nearby[2] - nearby[3]) / (12.0 * h))
+
+
+def g_star_sqrt(temperature: FloatArray, source: str) -> FloatArray:
+    """g*^(1/2) at temperatures in GeV, same shape, the slope of g_s included."""
+    g = SOURCES[source]
+    temperature = np.asarray(temperature, dtype=float)
+    slope = entropy_slope(temperature, source)
     return np.asarray(g.g_s(temperature) / np.sqrt(g.g_rho(temperature)) * (1.0 + slope / 3.0))
 
 
@@ -213,13 +220,18 @@ _TABLE_SIZE: Final = 3001
 """ln T from 1e-7 GeV to 1e6 GeV; constant outside."""
 
 
+def solver_temperatures() -> FloatArray:
+    """Temperatures of the solver's grid, GeV, shape (3001,)."""
+    return np.asarray(np.exp(_TABLE_START + _TABLE_STEP * np.arange(_TABLE_SIZE)))
+
+
 @lru_cache(maxsize=len(EQUATIONS_OF_STATE))
 def solver_table(source: str) -> FloatArray:
     """g_s and g*^(1/2) on the solver's grid in ln T, shape (3001, 2), read-only.
 
     Interpolated, it is good to 1e-5 (3e-5 at the knots of the spline), except within a cell or two of an edge.
     """
-    temperature = np.exp(_TABLE_START + _TABLE_STEP * np.arange(_TABLE_SIZE))
+    temperature = solver_temperatures()
     table = np.column_stack([SOURCES[source].g_s(temperature), g_star_sqrt(temperature, source)])
     table.setflags(write=False)
     return table

@@ -15,9 +15,10 @@ from scanfit.priors import FloatArray
 
 from ..constants import CRITICAL_DENSITY_GEV_CM3, ENTROPY_TODAY_CM3, GEV_M2_TO_CM3_S
 from .boltzmann import SOLVED, rate_and_equilibrium, solve
-from .degrees_of_freedom import SOURCES, solver_table
 from .panels import LOWEST_X
+from .plasma import Blend, plasma_range, plasma_table
 from .thermal_average import average, share_near_poles, thermal_nodes
+from .unitarity import s_wave_bound
 
 if TYPE_CHECKING:
     from ..candidate import Annihilation
@@ -150,7 +151,7 @@ def freeze_out(
     degrees_of_freedom: int,
     self_conjugate: bool,
     annihilation: Annihilation,
-    equation_of_state: str,
+    equation_of_state: str | Blend,
 ) -> FreezeOut:
     """Solve freeze-out.
 
@@ -164,8 +165,8 @@ def freeze_out(
         Whether the particle is its own antiparticle.
     annihilation : Annihilation
         Its `total`, `poles` and `thresholds` are used.
-    equation_of_state : str
-        Name of a source in `degrees_of_freedom.SOURCES`.
+    equation_of_state : str or Blend
+        Name of a source in `degrees_of_freedom.SOURCES`, or a blend of two.
 
     Returns
     -------
@@ -174,10 +175,10 @@ def freeze_out(
     Raises
     ------
     PointError
-        If the mass is not a positive number.
+        If the mass is not a positive number, or a blend of equations of state makes no plasma.
     """
     problem = _pose(mass, degrees_of_freedom, self_conjugate, annihilation)
-    table = solver_table(equation_of_state)
+    table = plasma_table(equation_of_state)
     nodes = problem.nodes
     flags = dict.fromkeys(RELIC_FLAGS, False)
     today, x, stepping_error, status, _ = solve(
@@ -188,11 +189,11 @@ def freeze_out(
         return FreezeOut(math.nan, math.nan, math.inf, flags, mass, math.nan)
 
     sigma_v = average(nodes, x) / problem.pair_factor
-    source = SOURCES[equation_of_state]
+    lowest, highest = plasma_range(equation_of_state)
     flags["narrow_resonance"] = _narrow_resonance(problem, mass, x)
-    flags["outside_degrees_of_freedom_table"] = mass / x > source.highest or 0.01 * mass / x < source.lowest
+    flags["outside_degrees_of_freedom_table"] = mass / x > highest or 0.01 * mass / x < lowest
     flags["never_in_equilibrium"] = x < 5.0 and not _reaches_equilibrium(problem, table, mass)
-    flags["above_unitarity_bound"] = sigma_v > 4.0 * math.pi / mass**2 * math.sqrt(x / math.pi)
+    flags["above_unitarity_bound"] = sigma_v > s_wave_bound(mass, x)
     flags["thermal_average_uncertain"] = problem.error > 0.01
     error = problem.error + _ERROR_SHARE * stepping_error
     omega_h2 = _OMEGA_PER_YIELD * mass * today
@@ -225,11 +226,11 @@ def thermal_history(
     degrees_of_freedom: int,
     self_conjugate: bool,
     annihilation: Annihilation,
-    equation_of_state: str,
+    equation_of_state: str | Blend,
 ) -> ThermalHistory:
     """Freeze-out step by step, from x = 1 to where the yield no longer changes; arguments as for `freeze_out`."""
     problem = _pose(mass, degrees_of_freedom, self_conjugate, annihilation)
-    table = solver_table(equation_of_state)
+    table = plasma_table(equation_of_state)
     track = np.full((2000, 2), np.nan)
     solve(problem.nodes, table, mass, problem.count, problem.last_x, LOWEST_X, _DEPARTURE, 1e-5, 0.05, track)
     track = track[np.isfinite(track[:, 0])]

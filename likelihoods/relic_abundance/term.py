@@ -17,6 +17,15 @@ from scanfit.errors import PointError
 from ..candidate import Candidate
 from ..constants import OMEGA_H2_OBSERVED
 
+ErrorFlag = Literal[
+    "narrow_resonance",
+    "outside_degrees_of_freedom_table",
+    "never_in_equilibrium",
+    "above_unitarity_bound",
+    "thermal_average_uncertain",
+]
+"""Flags of `RELIC_FLAGS` that leave an abundance, if a doubtful one."""
+
 
 class RelicAbundanceOptions(validation.Options):
     """Keys of the term; defaults: the measurement of arXiv:1807.06209, and the spread between equations of state."""
@@ -28,8 +37,8 @@ class RelicAbundanceOptions(validation.Options):
     """Of the measurement."""
     theory_error: NonNegativeFloat = 0.05
     """Of the prediction, relative."""
-    narrow_resonance_theory_error: PositiveFloat | None = Field(default=None)
-    """Relative theory error where the flag `narrow_resonance` is on; the ordinary one when absent."""
+    flag_theory_errors: Mapping[ErrorFlag, NonNegativeFloat] = Field(default_factory=dict)
+    """Relative theory errors where a validity flag is raised, by flag; the largest that applies counts."""
 
 
 class RelicAbundance(Term[Candidate]):
@@ -52,7 +61,8 @@ class RelicAbundance(Term[Candidate]):
     caveats = (
         "The relic abundance assumes kinetic equilibrium during freeze-out; near a narrow resonance that can change it "
         "by up to a factor of ten (arXiv:1706.07433). Such points carry the flag narrow_resonance.",
-        "Published degrees of freedom of the primordial plasma differ by several per cent; the theory error covers it.",
+        "Published degrees of freedom of the primordial plasma differ by several per cent; the theory error covers it, "
+        "or the nuisance equation_of_state_shift, when it is free, carries it.",
     )
 
     def __init__(self, options: RelicAbundanceOptions, context: BuildContext) -> None:
@@ -90,7 +100,7 @@ class RelicAbundance(Term[Candidate]):
             raise PointError("the relic abundance could not be computed at this point")
         if self.options.mode == "upper-limit":
             total = max(total, self.observed)
-        theory_error = self.options.theory_error
-        if self.options.narrow_resonance_theory_error is not None and prediction.relic.flags["narrow_resonance"]:
-            theory_error = self.options.narrow_resonance_theory_error
+        flags = prediction.relic.flags
+        raised = [error for flag, error in self.options.flag_theory_errors.items() if flags[flag]]
+        theory_error = max(self.options.theory_error, *raised, 0.0)
         return total, math.hypot(self.options.error, theory_error * total)

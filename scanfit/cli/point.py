@@ -21,22 +21,37 @@ if TYPE_CHECKING:
 @click.command()
 @click.argument("file", type=click.Path(path_type=Path))
 @click.argument("values", nargs=-1, metavar="[NAME=VALUE]...")
+@click.option("--show", multiple=True, metavar="DETAIL", help="Show more of the model's, for example: thermal.")
+@click.option("--out", type=click.Path(path_type=Path), help="Folder for table and figure of what --show shows.")
 @click.option("--json", "as_json", is_flag=True, help="Print as JSON.")
-def point(file: Path, values: tuple[str, ...], as_json: bool) -> None:
+def point(file: Path, values: tuple[str, ...], show: tuple[str, ...], out: Path | None, as_json: bool) -> None:
     """Show one point of the model in FILE: predicted beside observed, term by term.
 
     Every free model parameter needs a value. A nuisance that is not given takes the median of its prior; a fixed
     parameter can be given another value.
     """
+    from scanfit.cli.detail import detail_as_json, find_details, print_detail, write_detail
     from scanfit.driver.summary import describe_point
     from scanfit.runfile import load
 
+    if out is not None and not show:
+        raise InputError([Problem("--out", "only goes with --show")], "point")
     run_file = load(file)
-    found = describe_point(run_file.posterior, _complete(_parsed(values), run_file.posterior.space))
+    posterior = run_file.posterior
+    complete = _complete(_parsed(values), posterior.space)
+    found = describe_point(posterior, complete)
+    # Where the model fails there is nothing to show; the failure is told below.
+    details = find_details(posterior.model.predict(complete), show) if show and "failure" not in found else {}
+    written = [file for name, item in details.items() if out for file in write_detail(name, item, out)]
     if as_json:
-        print_json(found)
+        shown = {"details": {name: detail_as_json(item) for name, item in details.items()}} if show else {}
+        print_json({**found, **shown})
     else:
         _print_point(found, run_file)
+        for item in details.values():
+            print_detail(console(), item)
+        for path in written:
+            console().print(f"Wrote {path}", highlight=False, soft_wrap=True)
     if "failure" in found:
         raise click.exceptions.Exit(1)
 
@@ -101,6 +116,9 @@ def _print_point(found: Mapping[str, Any], run_file: RunFile) -> None:
     meanings = run_file.posterior.model.flag_names
     for flag in (name for name, raised in found["flags"].items() if raised):
         screen.print(f"Flag {flag}: {meanings[flag]}", highlight=False, soft_wrap=True)
+    if found["rejected_for"]:
+        cut = ", ".join(found["rejected_for"])
+        screen.print(f"The run file rejects this point for {cut}: its likelihood is zero.", style="bold")
     for caveat in run_file.caveats:
         screen.print(f"Note: {caveat}", highlight=False, soft_wrap=True)
 

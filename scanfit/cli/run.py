@@ -51,6 +51,9 @@ def _print_summary(summary: dict[str, Any], folder: Path) -> None:
     if not summary["converged"]:
         screen.print("NOT CONVERGED by its own criteria: do not quote these numbers.", style="bold")
     screen.print(f"{summary['calls']:,} points, {summary['failed_points']:,} of them failed.", highlight=False)
+    if summary["reject_flags"]:
+        cut = ", ".join(summary["reject_flags"])
+        screen.print(f"{summary['rejected_points']:,} of them cut for a validity flag: {cut}.", highlight=False)
     screen.print(f"Read {folder / REPORT}", highlight=False, soft_wrap=True)
 
 

@@ -12,7 +12,7 @@ from scanfit.contracts import Progress
 from scanfit.driver.interruption import Interruption
 from scanfit.driver.reporter import Reporter, Tally
 from scanfit.errors import ScanStopped
-from scanfit.posterior import Posterior, Status
+from scanfit.posterior import FAILURES, Posterior
 from scanfit.priors import FloatArray
 from scanfit.store.archive import PointsArchive
 from scanfit.store.failures import FailureLog
@@ -69,7 +69,7 @@ class Recorder:
         self._flush_seconds, self._failed_fraction_maximum = flush_seconds, failed_fraction_maximum
         known = archive.frame(["log_likelihood", "status"])
         self._best = float(known["log_likelihood"].max()) if len(known) else -math.inf
-        self._failed = int((known["status"] != Status.EVALUATED).sum())
+        self._failed = int(known["status"].isin(FAILURES).sum())
         self._started = self._flushed = self._reported = time.monotonic()
         self._evaluated = self._answered = 0
         self._explorer, self._progress = "", Progress("start")
@@ -136,7 +136,7 @@ class Recorder:
         self._archive.append(batch.rows)
         self._evaluated += len(batch.rows)
         self._best = max(self._best, float(batch.rows[:, self._likelihood_column].max()))
-        self._failed += int((batch.rows[:, self._status_column] != Status.EVALUATED).sum())
+        self._failed += int(np.isin(batch.rows[:, self._status_column], FAILURES).sum())
         for failure in batch.failures:
             values = self._space.values(batch.rows[failure.row, : self._space.dimension])
             self._failures.add(values, failure.culprit, failure.message)

@@ -81,6 +81,7 @@ def write_summary(
     wanted = [*posterior.space.free_names, *(quantity.name for quantity in posterior.quantities)]
     drawable = {name: axes[name] for name in wanted if name in axes}
     points = archive.frame([*drawable, "log_likelihood", "status", *posterior.term_columns])
+    rejected = int((points["status"] == Status.REJECTED).sum())
     points = points[points["status"] == Status.EVALUATED]
     constraints = nuisance_constraints(posterior)
     write_parquet(folder / PROFILE, profile_table(points, drawable, run_file.figures.planes, constraints))
@@ -119,7 +120,9 @@ def write_summary(
         "quantities": quantity_entries(posterior),
         "planes": run_file.figures.planes,
         "calls": len(archive),
-        "failed_points": len(archive) - len(points),
+        "failed_points": len(archive) - len(points) - rejected,
+        "reject_flags": posterior.reject_flags,
+        "rejected_points": rejected,
         "wall_seconds": sum(e["wall_seconds"] for e in explorations.values()),
         "versions": package_versions(),
     }
@@ -161,6 +164,7 @@ def describe_point(posterior: Posterior, values: Mapping[str, float]) -> dict[st
         "terms": {name: row[f"loglike_{name}"] for name in posterior.terms},
         "derived": {quantity.name: row[quantity.name] for quantity in posterior.quantities},
         "flags": {name: row[f"flag_{name}"] == 1.0 for name in posterior.flag_names},
+        "rejected_for": [name for name in posterior.reject_flags if row[f"flag_{name}"] == 1.0],
         "explain": {name: [_observable(item) for item in items] for name, items in explained.items()},
         **({"failure": f"{failure.culprit}: {failure.message}"} if failure else {}),
     }

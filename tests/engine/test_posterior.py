@@ -10,6 +10,8 @@ import numpy as np
 import pytest
 from scipy import stats
 
+from scanfit.driver.summary import describe_point
+from scanfit.errors import InputError
 from scanfit.posterior import Posterior, Status
 from scanfit.runfile import load
 
@@ -76,3 +78,36 @@ def test_minus_infinity_is_a_likelihood_not_a_failure(toy: Toy) -> None:
     batch = posterior.evaluate_many(np.array([[0.9, 0.0, 0.0]]))
     assert batch.failures == ()
     assert batch.rows[0, posterior.column("status")] == Status.EVALUATED
+
+
+REJECT = ("seed = 7", 'seed = 7\nreject_flags = ["far"]')
+
+
+def test_a_rejected_flag_is_likelihood_zero_but_no_failure(toy: Toy) -> None:
+    posterior = load(toy(REJECT)).posterior
+    batch = posterior.evaluate_many(np.array([[0.3, 0.4, 0.0], [0.9, -0.8, 0.05]]))
+    assert batch.failures == ()
+    assert batch.rows[:, posterior.column("status")].tolist() == [Status.EVALUATED, Status.REJECTED]
+    assert np.isfinite(batch.rows[:, posterior.column("log_likelihood")]).tolist() == [True, False]
+    assert batch.rows[1, posterior.column("log_likelihood")] == -math.inf
+    # No term was asked, but what the model predicts is there.
+    assert math.isnan(batch.rows[1, posterior.column("loglike_bump")])
+    assert batch.rows[1, posterior.column("radius")] == pytest.approx(math.hypot(0.9, 0.8))
+    assert batch.rows[:, posterior.column("flag_far")].tolist() == [0.0, 1.0]
+
+
+def test_a_rejected_point_is_still_explained(toy: Toy) -> None:
+    """A single point for people shows its terms, with likelihood zero all the same."""
+    posterior, free = (load(toy(*replacement)).posterior for replacement in ((REJECT,), ()))
+    values = {"x": 0.9, "y": -0.8, "shift": 0.05}
+    row = posterior.evaluate(values).rows[0]
+    assert row[posterior.column("log_likelihood")] == -math.inf
+    assert row[posterior.column("loglike_bump")] == free.evaluate(values).rows[0][free.column("loglike_bump")]
+    found = describe_point(posterior, values)
+    assert found["rejected_for"] == ["far"]
+    assert describe_point(free, values)["rejected_for"] == []
+
+
+def test_only_a_flag_of_the_model_can_be_rejected(toy: Toy) -> None:
+    with pytest.raises(InputError, match=r"run\.reject_flags.*given: 'farr'.*did you mean 'far'\?; allowed: far"):
+        load(toy(("seed = 7", 'seed = 7\nreject_flags = ["farr"]')))

@@ -152,6 +152,21 @@ def test_failed_points_are_counted_and_explained(toy: Toy, tmp_path: Path) -> No
     assert entry["values"]["x"] > 0.8
 
 
+def test_rejected_points_are_counted_apart(toy: Toy, tmp_path: Path) -> None:
+    """Three quarters of the cube are cut away: nothing has failed, and the posterior keeps to the rest."""
+    cut = (("seed = 7", 'seed = 7\nreject_flags = ["far"]'), ("from = -1.0, to = 1.0", "from = -1.8, to = 1.8"))
+    outcome, _ = scan(toy(*cut), tmp_path / "out")
+    points = Run(tmp_path / "out").points()
+    far = np.hypot(points["x"], points["y"]) > 1.0
+    assert outcome.summary["rejected_points"] == int(far.sum()) > 0
+    assert outcome.summary["failed_points"] == 0
+    assert list(outcome.summary["reject_flags"]) == ["far"]
+    assert np.all(points.loc[far, "log_likelihood"] == -math.inf)
+    posterior = Run(tmp_path / "out").posterior("nested")
+    assert float(posterior.loc[np.hypot(posterior["x"], posterior["y"]) > 1.0, "weight"].sum()) == 0.0
+    assert outcome.summary["flags"]["far"]["posterior_fraction"] == 0.0
+
+
 def test_too_many_failures_stop_the_scan_and_lose_nothing(toy: Toy, tmp_path: Path) -> None:
     trouble = '[terms.trouble]\nuse = "toy.py:Trouble"\nhow = "nan"\nabove = 0.0\n\n[explore]'
     with pytest.raises(ScanStopped, match=r"failed_fraction_maximum = 0\.2 allows; the latest: terms\.trouble"):

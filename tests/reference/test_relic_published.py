@@ -7,6 +7,8 @@ and a critical density of 1.05371e-5 h^2 GeV cm^-3. Published statements name th
 from __future__ import annotations
 
 import math
+from collections.abc import Callable
+from functools import partial
 from pathlib import Path
 from typing import Literal
 
@@ -15,11 +17,14 @@ import pytest
 from scipy.optimize import brentq
 
 from scanfit.contracts import BuildContext
+from scanfit.likelihoods.candidate import Annihilation
 from scanfit.likelihoods.constants import GEV_M2_TO_CM3_S, PLANCK_MASS
 from scanfit.likelihoods.models.spin_one_mediator import SpinOneMediatorModel
 from scanfit.likelihoods.relic_abundance.cross_sections import constant_average, velocity_expansion
 from scanfit.likelihoods.relic_abundance.degrees_of_freedom import SOURCES, g_star_sqrt
 from scanfit.likelihoods.relic_abundance.freeze_out import FreezeOut, freeze_out
+from scanfit.likelihoods.relic_abundance.thermal_average import average, thermal_nodes
+from scanfit.priors import FloatArray
 from tests.reference import relic_reference
 
 DEFAULT = "arxiv-1803.01038"
@@ -82,6 +87,47 @@ def test_p_wave_reference(mass: float, b: float) -> None:
     assert own == pytest.approx(0.12, rel=5e-3)
 
 
+def average_of_one_over_x(mass: float) -> Callable[[FloatArray], FloatArray]:
+    """sigma v_rel(s) whose thermal average is 1/x within 2e-4 from x = 8 to 1e5, fitted to scipy quadratures."""
+    powers = (0.0, 1.0, 2.0, 3.0, 4.0)
+    x = np.geomspace(8.0, 1e5, 50)
+
+    def wave(s: float, power: float) -> float:
+        y2 = max(0.0, s / (4.0 * mass**2) - 1.0)
+        return y2 / (1.0 + y2) ** power
+
+    averages = np.array(
+        [[relic_reference.thermal_average(partial(wave, power=p), mass, value) for p in powers] for value in x.tolist()]
+    )
+    share = np.linalg.lstsq(averages * x[:, None], np.ones(len(x)), rcond=None)[0]
+    np.testing.assert_allclose(averages @ share * x, 1.0, atol=2e-4)
+
+    def total(s: FloatArray) -> FloatArray:
+        y2 = s / (4.0 * mass**2) - 1.0
+        return np.asarray(sum(c * y2 / (1.0 + y2) ** p for c, p in zip(share.tolist(), powers, strict=True)))
+
+    return total
+
+
+@pytest.mark.parametrize(("mass", "b"), [(10.0, 1.52e-25), (100.0, 1.59e-25), (1000.0, 1.82e-25)])
+def test_p_wave_through_the_fast_solver(mass: float, b: float) -> None:
+    """The same three values; <sigma v> = 6 b/x exactly, which no expansion in v_rel has."""
+    shape = average_of_one_over_x(mass)
+    rate = 6.0 * b / GEV_M2_TO_CM3_S
+
+    def total(s: FloatArray) -> FloatArray:
+        return rate * shape(s)
+
+    own = freeze_out(
+        mass=mass,
+        degrees_of_freedom=2,
+        self_conjugate=True,
+        annihilation=Annihilation(("bb",), lambda s: total(s)[None, :], total),
+        equation_of_state=DEFAULT,
+    )
+    assert own.omega_h2 == pytest.approx(0.12, rel=5e-3)
+
+
 @pytest.mark.parametrize(
     ("coupling", "mass", "mediator_mass", "omega_h2"),
     [("vector", 100.0, 1000.0, 0.1383), ("axial", 300.0, 1000.0, 0.1914)],
@@ -95,6 +141,15 @@ def test_spin_one_mediators(
     charges = {"delta_u": 0.84, "delta_d": -0.43, "delta_s": -0.09}
     candidate = SpinOneMediatorModel(options, BuildContext(Path())).predict({**values, **charges})
     assert candidate.omega_h2 == pytest.approx(omega_h2, rel=5e-3)
+
+
+def test_p_wave_of_the_axial_mediator() -> None:
+    """Independent value: 4.75e-26 cm^3/s at x = 25 for M = 1000, m = 300 GeV, over five times the rate at rest."""
+    model = SpinOneMediatorModel(SpinOneMediatorModel.Options(coupling="axial"), BuildContext(Path()))
+    values = {"mass": 300.0, "mediator_mass": 1000.0, "g_quark": 0.25, "g_dark": 1.0, "g_lepton": 0.0}
+    own = model.predict({**values, "delta_u": 0.84, "delta_d": -0.43, "delta_s": -0.09}).annihilation
+    nodes, _, _ = thermal_nodes(own.total, 300.0, np.array(own.poles), np.array(own.thresholds))
+    assert average(nodes, 25.0) * GEV_M2_TO_CM3_S == pytest.approx(4.75e-26, rel=5e-3)
 
 
 def test_dirac_needs_about_twice_the_rate() -> None:

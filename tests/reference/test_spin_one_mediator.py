@@ -246,7 +246,7 @@ def test_axial_charges_are_nuisances_of_the_axial_model_alone() -> None:
         ]
         for coupling in ("vector", "axial")
     }
-    assert names["vector"] == ["mass", "mediator_mass", "g_quark", "g_dark", "g_lepton"]
+    assert names["vector"] == ["mass", "mediator_mass", "g_quark", "g_dark", "g_lepton", "equation_of_state_shift"]
     assert names["axial"] == [*names["vector"], *AXIAL_CHARGES]
 
 

@@ -51,7 +51,7 @@ def _mediator(options: SpinOneMediatorModel.Options) -> Draw:
 
 
 @pytest.mark.parametrize("build", [singlet, vector, axial])
-@pytest.mark.parametrize("count", [1000, pytest.param(100_000, marks=pytest.mark.soak)])
+@pytest.mark.parametrize("count", [5000, pytest.param(100_000, marks=pytest.mark.soak)])
 def test_finite_or_flagged(build: Callable[[], Draw], count: int) -> None:
     rng = np.random.default_rng(9)
     draw = build()

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 from pathlib import Path
+from typing import get_args
 
 import numpy as np
 import pytest
@@ -14,7 +15,8 @@ from scanfit.contracts import BuildContext
 from scanfit.errors import InputError, PointError
 from scanfit.likelihoods.candidate import Annihilation, Candidate
 from scanfit.likelihoods.relic_abundance.cross_sections import constant_average
-from scanfit.likelihoods.relic_abundance.term import RelicAbundance
+from scanfit.likelihoods.relic_abundance.freeze_out import RELIC_FLAGS
+from scanfit.likelihoods.relic_abundance.term import ErrorFlag, RelicAbundance
 from scanfit.validation import check
 
 
@@ -73,13 +75,23 @@ def near_a_pole() -> Candidate:
     return Candidate(mass=60.0, self_conjugate=True, spin_degrees_of_freedom=1, annihilation=annihilation)
 
 
-def test_larger_theory_error_near_a_narrow_resonance() -> None:
+def test_larger_theory_error_where_a_flag_is_raised() -> None:
     resonant = near_a_pole()
     assert resonant.relic.flags["narrow_resonance"]
-    wide = term(narrow_resonance_theory_error=1.0)
+    assert not resonant.relic.flags["above_unitarity_bound"]
     error = math.hypot(0.0012, resonant.omega_h2)
-    assert wide.loglike(resonant, {}) == pytest.approx(norm.logpdf(0.12, resonant.omega_h2, error))
+    expected = norm.logpdf(0.12, resonant.omega_h2, error)
+    wide = term(flag_theory_errors={"narrow_resonance": 1.0, "above_unitarity_bound": 3.0})
+    assert wide.loglike(resonant, {}) == pytest.approx(expected)
     assert wide.loglike(RIGHT, {}) == term().loglike(RIGHT, {})
+    # A flag never makes the prediction more certain.
+    assert term(flag_theory_errors={"narrow_resonance": 0.0}).loglike(resonant, {}) == term().loglike(resonant, {})
+
+
+def test_every_flag_that_leaves_an_abundance_can_enlarge_the_error() -> None:
+    assert set(get_args(ErrorFlag)) == set(RELIC_FLAGS) - {"relic_abundance_failed"}
+    with pytest.raises(InputError, match=r"flag_theory_errors\.narow_resonance.*did you mean 'narrow_resonance'"):
+        term(flag_theory_errors={"narow_resonance": 1.0})
 
 
 def test_expected_data_are_the_best_data() -> None:
