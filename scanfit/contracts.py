@@ -15,6 +15,7 @@ from typing import Any, ClassVar, Generic, Literal, Protocol, Self, TypeVar, run
 
 import numpy as np
 
+from scanfit.errors import InputError, Problem
 from scanfit.priors import FloatArray
 from scanfit.space import Parameter
 from scanfit.validation import Options
@@ -125,6 +126,26 @@ class Observable:
     note: str = ""
 
 
+@dataclass(frozen=True)
+class LimitCurve:
+    """Upper limits of one search alone.
+
+    Arrays have shape (n,); `bands` has shape (n, 5): quantiles 2.5, 16, 50, 84, 97.5 % of background-only limits, or None.
+    """
+
+    title: str
+    x: Quantity
+    """Name, unit, symbol, scale of the abscissa."""
+    y: Quantity
+    """The same of the limit."""
+    level: float
+    """0.90, 0.95"""
+    x_values: FloatArray
+    observed: FloatArray | None
+    bands: FloatArray | None
+    caveats: tuple[str, ...] = ()
+
+
 class Term(ABC, Generic[PredictionT]):
     """One search: data, and the likelihood of the data given a prediction.
 
@@ -141,6 +162,8 @@ class Term(ABC, Generic[PredictionT]):
     """What a reader of the result must know: invented data, an approximate likelihood, an extrapolated table."""
     data_files: tuple[Path, ...] = ()
     """Every file the term read; they are part of the run's fingerprint."""
+    curves: ClassVar[Mapping[str, str]] = {}
+    """Name of each limit curve with a one-line description."""
 
     @abstractmethod
     def __init__(self, options: Any, context: BuildContext) -> None: ...
@@ -166,6 +189,37 @@ class Term(ABC, Generic[PredictionT]):
     def expected(self, prediction: PredictionT, values: Mapping[str, float]) -> Self:
         """Return the same term holding the expected (Asimov) data of this point."""
         raise NotImplementedError(f"{self.name} has no expected data")
+
+    def limit_curve(
+        self,
+        curve: str,
+        *,
+        level: float | None = None,
+        points: int = 40,
+        pseudo_experiments: int = 200,
+        rng: np.random.Generator | None = None,
+    ) -> LimitCurve:
+        """Upper limits of this search alone.
+
+        Parameters
+        ----------
+        curve : str
+            A name among `curves`.
+        level : float, optional
+            Confidence level; the term's own by default.
+        points : int
+            Length of the curve.
+        pseudo_experiments : int
+            Background-only data sets behind the bands, where they are drawn.
+        rng : Generator, optional
+            Their randomness.
+
+        Raises
+        ------
+        InputError
+            If there is no such curve.
+        """
+        raise InputError([Problem("curve", "this term has no such limit curve", curve, tuple(self.curves))], self.name)
 
 
 class Evaluate(Protocol):
