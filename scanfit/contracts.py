@@ -146,6 +146,36 @@ class LimitCurve:
     caveats: tuple[str, ...] = ()
 
 
+@dataclass(frozen=True)
+class ExclusionPlane:
+    """What one search alone excludes in a plane: confidence (CLs) of every point, small where it is excluded.
+
+    `observed` and `expected` (the median without signal) have shape (n_y, n_x); a point is excluded at confidence level
+    L where they are below 1 - L, and NaN where the search refuses it.
+    """
+
+    title: str
+    fixed: str
+    """What is held fixed, in words."""
+    x: Quantity
+    y: Quantity
+    x_values: FloatArray
+    y_values: FloatArray
+    observed: FloatArray
+    expected: FloatArray
+    caveats: tuple[str, ...] = ()
+
+    def table(self) -> dict[str, FloatArray]:
+        """Columns of the plane, one row a point; ready for ``pandas.DataFrame``."""
+        x, y = np.meshgrid(self.x_values, self.y_values)
+        return {
+            self.x.name: x.ravel(),
+            self.y.name: y.ravel(),
+            "cls_observed": self.observed.ravel(),
+            "cls_expected": self.expected.ravel(),
+        }
+
+
 class Term(ABC, Generic[PredictionT]):
     """One search: data, and the likelihood of the data given a prediction.
 

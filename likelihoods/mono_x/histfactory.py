@@ -67,6 +67,9 @@ class HistFactoryLikelihood:
         self._bins = np.concatenate([np.arange(*config.channel_slices[name].indices(1 << 30)) for name in channels])
         self._prove(model)
 
+    sampled: Final = False
+    """No marginal likelihood at all, see `marginal`."""
+
     @property
     def count(self) -> int:
         """Number of bins that receive the signal."""
@@ -82,6 +85,10 @@ class HistFactoryLikelihood:
         counts = self._data
         saturated = float((xlogy(counts, counts) - counts - gammaln(counts + 1.0)).sum())
         return saturated - self._fit(signal, log_uncertainty)[0]
+
+    def marginal(self, signal: FloatArray, log_uncertainty: FloatArray | None = None) -> float:
+        """Not to be had: free parameters have no density to integrate over. Raises NotImplementedError."""
+        raise NotImplementedError("a full likelihood can only be profiled")
 
     def best_background(self, signal: FloatArray, log_uncertainty: FloatArray | None = None) -> FloatArray:
         """Expected background at the maximum of ln L, in the bins that receive the signal."""
