@@ -93,8 +93,9 @@ class OwnRates:
 
     Columns: `mediator_mass` and `dark_mass` (GeV), `bin` (1 for the first), `cross_section` (times acceptance, in the
     unit of the analysis file) and, if known, `relative_uncertainty`. Every pair of masses must come once with every
-    bin; the pairs need not form a rectangle. Between them the ratio to the shipped rates is linear in ln(mediator mass)
-    and ln(dark-matter mass) on triangles. Dark matter lighter than any in the table is taken as the lightest there if
+    bin; the pairs need not form a rectangle. Between them the ratio to the shipped rates is linear on triangles in
+    ln max(M, 2 m), the least energy that must be produced, and ln(m/M). Shipped rates are those of the same bin, or above
+    200 GeV of missing momentum when the bins are `regions`. Dark matter lighter than any in the table is taken as the lightest there if
     that is below a tenth of the mediator's mass.
 
     Parameters
@@ -116,9 +117,7 @@ class OwnRates:
             raise ValueError("the analysis has no signal table of its own")
         path = folder / own.table
         reference = nearest_table(analysis.signature, analysis.sqrt_s)
-        cut = analysis.edges[0] if analysis.edges else _USUAL_CUT
-        cut = float(np.clip(cut, reference.cut[0], 0.5 * reference.cut[-1]))
-        self._reference = ShippedRates(reference, (cut, math.inf))
+        self._reference = ShippedRates(reference, analysis.bin_edges or (_USUAL_CUT, math.inf))
         self.files = (path, *self._reference.files)
         columns = read_columns(
             path, ("mediator_mass", "dark_mass", "bin", "cross_section"), ("relative_uncertainty",)
@@ -152,18 +151,18 @@ class OwnRates:
         cross_section = scale * columns["cross_section"][order].reshape(len(points), -1)
         spread = columns.get("relative_uncertainty", np.zeros(len(order)))[order].reshape(cross_section.shape)
         shipped = np.array([self._shipped_at(own.coupling, own.g_quark, own.g_dark, own.g_lepton, *p) for p in points])
-        dead = np.flatnonzero(shipped == 0.0)
+        dead = np.flatnonzero(np.any(shipped == 0.0, axis=1))
         if len(dead):
             m, d = points[dead[0]]
             rule = "the shipped rate vanishes here, beyond the kinematic end: leave out such masses"
             raise InputError([Problem("dark_mass", rule, f"mediator {m:g}, dark matter {d:g} GeV")], str(path))
         try:
-            self._triangles = Delaunay(np.log(points))
+            self._triangles = Delaunay(_position(points[:, 0], points[:, 1]))
         except QhullError:
             rule = "the pairs of masses must span an area: at least three, not in line"
             raise InputError([Problem("mediator_mass", rule)], str(path)) from None
-        self._values = np.concatenate([cross_section / shipped[:, None], np.log1p(spread)], axis=1)
-        self._lightest = float(points[:, 1].min())
+        self._values = np.concatenate([cross_section / shipped, np.log1p(spread)], axis=1)
+        self._lowest, self._highest = points.min(axis=0), points.max(axis=0)
         self._title = path.name
 
     def _shipped_at(
@@ -174,17 +173,18 @@ class OwnRates:
         g_lepton: float,
         mediator_mass: float,
         dark_mass: float,
-    ) -> float:
+    ) -> FloatArray:
         width = spin_one_total_width(mediator_mass, coupling, dark_mass, g_dark, g_quark, g_lepton)
         mediator = SpinOneMediator(mediator_mass, width, coupling, g_quark, g_dark, g_lepton)
-        return float(self._reference(mediator, dark_mass, 1.0)[0][0])
+        return self._reference(mediator, dark_mass, 1.0)[0]
 
     def __call__(self, mediator: SpinOneMediator, dark_mass: float, share: float) -> tuple[FloatArray, FloatArray]:
-        place = dark_mass
-        if dark_mass < self._lightest <= LIGHT * mediator.mass:
-            place = self._lightest
-        position = np.log([mediator.mass, place])
-        triangle = int(self._triangles.find_simplex(position, tol=1e-9))
+        masses = np.array([mediator.mass, dark_mass])
+        if dark_mass < self._lowest[1] <= LIGHT * mediator.mass:
+            masses[1] = self._lowest[1]
+        position = _position(masses[0], masses[1])
+        inside = bool(np.all((masses >= self._lowest) & (masses <= self._highest)))
+        triangle = int(self._triangles.find_simplex(position, tol=1e-9)) if inside else -1
         if triangle < 0:
             raise PointError(
                 f"a mediator of {mediator.mass:g} GeV with dark matter of {dark_mass:g} GeV lies outside the signal "
@@ -194,7 +194,11 @@ class OwnRates:
         weights = transform[:2] @ (position - transform[2])
         weights = np.append(weights, 1.0 - weights.sum())
         ratio, spread = np.split(weights @ self._values[self._triangles.simplices[triangle]], 2)
-        return np.maximum(ratio, 0.0) * self._reference(mediator, dark_mass, share)[0][0], spread
+        return np.maximum(ratio, 0.0) * self._reference(mediator, dark_mass, share)[0], spread
+
+
+def _position(mediator_mass: FloatArray, dark_mass: FloatArray) -> FloatArray:
+    return np.stack([np.log(np.maximum(mediator_mass, 2.0 * dark_mass)), np.log(dark_mass / mediator_mass)], axis=-1)
 
 
 def nearest_table(signature: str, sqrt_s: float) -> SignalTable:
