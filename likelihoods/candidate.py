@@ -95,7 +95,7 @@ class Current(NamedTuple):
 class SpinOneMediator:
     """A spin-one mediator with universal couplings; all decay widths follow from it (`mediator_widths`).
 
-    The last three are couplings of the other kind, axial beside vector or vector beside axial: zero for a pure mediator.
+    The last three are couplings of the other kind, axial beside vector or vector beside axial; zero when it is pure.
     """
 
     mass: float

@@ -44,7 +44,9 @@ def read_columns(path: Path, required: Sequence[str], optional: Sequence[str] = 
         values = pd.to_numeric(frame[name], errors="coerce").to_numpy(dtype=float)
         bad = np.flatnonzero(~np.isfinite(values))
         if len(bad):
-            problems.append(Problem(name, f"must be a finite number in row {bad[0] + 1}", str(frame[name].iloc[bad[0]])))
+            problems.append(
+                Problem(name, f"must be a finite number in row {bad[0] + 1}", str(frame[name].iloc[bad[0]]))
+            )
         result[name] = values
     if problems:
         raise InputError(problems, str(path))

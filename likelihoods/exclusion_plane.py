@@ -72,9 +72,7 @@ def exclusion_plane(
     expected = observed.copy()
     for row, dark_mass in enumerate(dark_masses):
         for column, mediator_mass in enumerate(mediator_masses):
-            candidate = spin_one_candidate(
-                float(mediator_mass), float(dark_mass), coupling, g_quark, g_dark, g_lepton
-            )
+            candidate = spin_one_candidate(float(mediator_mass), float(dark_mass), coupling, g_quark, g_dark, g_lepton)
             try:
                 observed[row, column], expected[row, column] = term.confidence(candidate)
             except PointError:

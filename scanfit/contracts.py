@@ -130,7 +130,8 @@ class Observable:
 class LimitCurve:
     """Upper limits of one search alone.
 
-    Arrays have shape (n,); `bands` has shape (n, 5): quantiles 2.5, 16, 50, 84, 97.5 % of background-only limits, or None.
+    Arrays have shape (n,); `bands` has shape (n, 5): quantiles 2.5, 16, 50, 84, 97.5 % of background-only limits, or
+    None.
     """
 
     title: str

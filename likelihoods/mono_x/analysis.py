@@ -173,8 +173,11 @@ class Analysis(Options):
                     Problem(key, f"must have one value for each of the {self.count} bins", f"{len(values)} values")
                 )
         if self.workspace is not None:
-            written = (*written, "covariance", "correlation", "correlated_fraction")
-            found += [Problem(key, "is read from the `workspace`") for key in written if getattr(self, key) is not None]
+            found += [
+                Problem(key, "is read from the `workspace`")
+                for key in (*written, "covariance", "correlation", "correlated_fraction")
+                if getattr(self, key) is not None
+            ]
             if self.channels is None:
                 found.append(Problem("channels", "name the channels of the `workspace` that are the bins of this file"))
             return found

@@ -78,7 +78,7 @@ class HistFactoryLikelihood:
     @property
     def observed(self) -> FloatArray:
         """Counts of these bins."""
-        return self._data[self._bins]
+        return np.asarray(self._data[self._bins])
 
     def profile(self, signal: FloatArray, log_uncertainty: FloatArray | None = None) -> float:
         """Maximum of ln L over all nuisances; arguments as for `SimplifiedLikelihood.profile`."""
@@ -92,7 +92,7 @@ class HistFactoryLikelihood:
 
     def best_background(self, signal: FloatArray, log_uncertainty: FloatArray | None = None) -> FloatArray:
         """Expected background at the maximum of ln L, in the bins that receive the signal."""
-        return self._rates(self._fit(signal, log_uncertainty)[1][:-1])[self._bins]
+        return np.asarray(self._rates(self._fit(signal, log_uncertainty)[1][:-1])[self._bins])
 
     def central(self) -> tuple[FloatArray, FloatArray]:
         """Background with every nuisance at its centre, and its standard deviation by linear propagation."""
@@ -218,7 +218,8 @@ def _read(path: Path, channels: tuple[str, ...], measurement: str | None) -> tup
 
 def _flatten(model: pyhf.Model) -> Layout:
     nominal: list[float] = []
-    row_first, row_at = [], [0]
+    row_first: list[int] = []
+    row_at = [0]
     shifts: list[tuple[int, int, int]] = []
     up: list[float] = []
     down: list[float] = []

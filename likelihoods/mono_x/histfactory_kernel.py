@@ -1,4 +1,4 @@
-"""Compiled profile likelihood of a HistFactory model: expectations with exact derivatives, and Newton's method in a box.
+"""Compiled profile likelihood of a HistFactory model: expectations, exact derivatives, Newton's method in a box.
 
 Model (HistFactory, CERN-OPEN-2012-016): the expectation of a bin is the sum over samples of (nominal + additive
 variations) times all factors. Additive variations and factors with a high and a low variant are interpolated as usual:
@@ -124,13 +124,13 @@ def _shift(alpha: float, up: float, down: float) -> tuple[float, float]:
 @njit(cache=True, error_model="numpy")
 def _scale(alpha: float, shape: FloatArray) -> tuple[float, float]:
     """Factor and its derivative; `shape` holds ln low, ln high and the six coefficients."""
+    value, derivative = 0.0, 0.0
     if alpha >= 1.0:
         value = math.exp(alpha * shape[1])
         return value, value * shape[1]
     if alpha <= -1.0:
         value = math.exp(-alpha * shape[0])
         return value, -value * shape[0]
-    value, derivative = 0.0, 0.0
     for k in range(5, -1, -1):
         derivative = derivative * alpha + (k + 1) * shape[2 + k]
         value = (value + shape[2 + k]) * alpha
@@ -154,7 +154,7 @@ def cost(
     """
     expectations(model, theta, rate, slope)
     last = theta.size - 1
-    total = 0.5 * theta[last] ** 2
+    total: float = 0.5 * theta[last] ** 2
     for i in range(observed.size):
         varied = signal[i] * math.exp(min(spread[i] * theta[last], 500.0))
         rate[i] += varied

@@ -1,4 +1,4 @@
-"""Limits of one search in bins alone: CLs from profile likelihood ratios with large-sample formulas, arXiv:1007.1727."""
+"""Limits of one search in bins alone: CLs from profile likelihood ratios with the formulas of arXiv:1007.1727."""
 
 from __future__ import annotations
 

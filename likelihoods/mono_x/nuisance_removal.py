@@ -60,25 +60,25 @@ def maximise(
     now, then = np.empty((4, n)), np.empty((4, n))
     gradient, hessian = np.empty(n + 1), np.empty((n + 1, n + 1))
     z[n] = _start(signal, spread, constant, slope)
-    _expectations(signal, spread, constant, slope, curvature, lower, z, now)
-    value = _cost(observed, now, z)
+    expectations(signal, spread, constant, slope, curvature, lower, z, now)
+    value = cost(observed, now, z)
     for _ in range(_MOST_STEPS):
-        _derivatives(observed, spread, lower, z, now, True, gradient, hessian)
-        if not _factorise(hessian):
-            _derivatives(observed, spread, lower, z, now, False, gradient, hessian)
-            _factorise(hessian)
+        derivatives(observed, spread, lower, z, now, True, gradient, hessian)
+        if not factorise(hessian):
+            derivatives(observed, spread, lower, z, now, False, gradient, hessian)
+            factorise(hessian)
         step = gradient.copy()
         _solve_lower(hessian, step)
         gain = 0.0
         for k in range(n + 1):
             gain += step[k] ** 2
-        _solve_upper(hessian, step)
+        solve_upper(hessian, step)
         size = _largest_step(spread, lower, step, now)
         while True:
             for k in range(n + 1):
                 trial[k] = z[k] - size * step[k]
-            _expectations(signal, spread, constant, slope, curvature, lower, trial, then)
-            new_value = _cost(observed, then, trial)
+            expectations(signal, spread, constant, slope, curvature, lower, trial, then)
+            new_value = cost(observed, then, trial)
             # Below the convergence limit rounding decides the comparison: take the step.
             if gain < _CONVERGED or new_value <= value - 1e-4 * size * gain:
                 break
@@ -94,10 +94,10 @@ def maximise(
 
     log_volume = correction = 0.0
     if volume:
-        _derivatives(observed, spread, lower, z, now, True, gradient, hessian)
-        if not _factorise(hessian):
-            _derivatives(observed, spread, lower, z, now, False, gradient, hessian)
-            _factorise(hessian)
+        derivatives(observed, spread, lower, z, now, True, gradient, hessian)
+        if not factorise(hessian):
+            derivatives(observed, spread, lower, z, now, False, gradient, hessian)
+            factorise(hessian)
         for k in range(n + 1):
             log_volume -= math.log(hessian[k, k])
         correction = _next_order(observed, spread, lower, now, hessian)
@@ -141,7 +141,7 @@ def _largest_step(spread: FloatArray, lower: FloatArray, step: FloatArray, expec
 
 
 @njit(cache=True, error_model="numpy")
-def _expectations(
+def expectations(
     signal: FloatArray,
     spread: FloatArray,
     constant: FloatArray,
@@ -151,6 +151,7 @@ def _expectations(
     z: FloatArray,
     out: FloatArray,
 ) -> None:
+    """Fill `out`, shape (4, n): expected counts, background's first and second derivative by theta, signal."""
     n = signal.size
     for i in range(n):
         theta = 0.0
@@ -170,7 +171,8 @@ def _expectations(
 
 
 @njit(cache=True, error_model="numpy")
-def _cost(observed: FloatArray, expectations: FloatArray, z: FloatArray) -> float:
+def cost(observed: FloatArray, expectations: FloatArray, z: FloatArray) -> float:
+    """f at `z`, given the expectations there."""
     total = 0.0
     for i in range(observed.size):
         rate = expectations[0, i]
@@ -183,7 +185,7 @@ def _cost(observed: FloatArray, expectations: FloatArray, z: FloatArray) -> floa
 
 
 @njit(cache=True, error_model="numpy")
-def _derivatives(
+def derivatives(
     observed: FloatArray,
     spread: FloatArray,
     lower: FloatArray,
@@ -220,7 +222,7 @@ def _derivatives(
 
 
 @njit(cache=True, error_model="numpy")
-def _factorise(matrix: FloatArray) -> bool:
+def factorise(matrix: FloatArray) -> bool:
     """Cholesky factor in place of the lower triangle; False when the matrix is not positive definite."""
     for j in range(matrix.shape[0]):
         for k in range(j + 1):
@@ -245,7 +247,8 @@ def _solve_lower(lower: FloatArray, vector: FloatArray) -> None:
 
 
 @njit(cache=True, error_model="numpy")
-def _solve_upper(lower: FloatArray, vector: FloatArray) -> None:
+def solve_upper(lower: FloatArray, vector: FloatArray) -> None:
+    """Solve with the transpose of a lower triangle, in place."""
     for j in range(vector.size - 1, -1, -1):
         for k in range(j + 1, vector.size):
             vector[j] -= lower[k, j] * vector[k]
@@ -322,81 +325,3 @@ def _next_order(
             )  # fmt: skip
             paired += b3 * (a0 * ts**3 + 3.0 * a1 * ts**2 * ss + 3.0 * a2 * ts * ss**2 + a3 * ss**3)
     return -quartic / 8.0 + chained / 8.0 + paired / 12.0
-
-
-SAMPLED_WIDTH: Final = 1.25
-"""Width of the sampling density around the peak, over that of the Gaussian approximation."""
-SAMPLED_PRIOR: Final = 0.25
-"""Share of points drawn from the nuisances' own density: it bounds the weights where a background is held at zero."""
-
-
-@njit(cache=True, error_model="numpy")
-def sampled_volume(
-    observed: FloatArray,
-    signal: FloatArray,
-    spread: FloatArray,
-    constant: FloatArray,
-    slope: FloatArray,
-    curvature: FloatArray,
-    lower: FloatArray,
-    peak: FloatArray,
-    nodes: FloatArray,
-) -> tuple[float, float]:
-    """Integrate exp(-f) over the normalised density of z by importance sampling on fixed points.
-
-    Parameters
-    ----------
-    observed, signal, spread, constant, slope, curvature, lower : ndarray
-        As for `maximise`.
-    peak : ndarray, shape (n + 1,)
-        Where f is smallest.
-    nodes : ndarray, shape (n_nodes, n + 1)
-        Quasi-random standard normal variates. The first `SAMPLED_PRIOR` of them are taken as they are, the others are
-        moved to the peak and stretched; all are weighted with the density of the mixture.
-
-    Returns
-    -------
-    log_volume : float
-        ln of the integral of exp(f(peak) - f), with the normalised density of z.
-    effective : float
-        Effective number of points.
-    """
-    n = observed.size
-    now = np.empty((4, n))
-    gradient, hessian = np.empty(n + 1), np.empty((n + 1, n + 1))
-    _expectations(signal, spread, constant, slope, curvature, lower, peak, now)
-    lowest = _cost(observed, now, peak)
-    # Where a background is held at zero the likelihood bends sharply at its peak, and is flat beside it.
-    now[2] = 0.0
-    _derivatives(observed, spread, lower, peak, now, False, gradient, hessian)
-    _factorise(hessian)
-    log_determinant = 0.0
-    for k in range(n + 1):
-        log_determinant += math.log(hessian[k, k] / SAMPLED_WIDTH)
-    from_prior = int(SAMPLED_PRIOR * nodes.shape[0])
-    z, step = np.empty(n + 1), np.empty(n + 1)
-    total = squares = 0.0
-    for index in range(nodes.shape[0]):
-        if index < from_prior:
-            z[:] = nodes[index]
-        else:
-            step[:] = nodes[index]
-            _solve_upper(hessian, step)
-            for k in range(n + 1):
-                z[k] = peak[k] + SAMPLED_WIDTH * step[k]
-        distance = length = 0.0
-        for k in range(n + 1):
-            along = 0.0
-            for m in range(k, n + 1):
-                along += hessian[m, k] * (z[m] - peak[m])
-            distance += along**2
-            length += z[k] ** 2
-        _expectations(signal, spread, constant, slope, curvature, lower, z, now)
-        # Both sampling densities relative to that of z, which is part of the cost.
-        near = math.exp(min(log_determinant - 0.5 * distance / SAMPLED_WIDTH**2 + 0.5 * length, 700.0))
-        weight = math.exp(lowest - _cost(observed, now, z) + 0.5 * length) / (
-            SAMPLED_PRIOR + (1.0 - SAMPLED_PRIOR) * near
-        )
-        total += weight
-        squares += weight**2
-    return math.log(total / nodes.shape[0]), total**2 / squares

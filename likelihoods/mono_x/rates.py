@@ -36,7 +36,10 @@ _USUAL_CUT: Final = 200.0
 class Rates(Protocol):
     """What the term asks for the signal."""
 
-    files: tuple[Path, ...]
+    @property
+    def files(self) -> tuple[Path, ...]:
+        """Every file that was read."""
+        ...
 
     def __call__(self, mediator: SpinOneMediator, dark_mass: float, share: float) -> tuple[FloatArray, FloatArray]:
         """Return cross section x acceptance in pb and its log uncertainty per bin, each of shape (n_bins,).
@@ -94,9 +97,9 @@ class OwnRates:
     Columns: `mediator_mass` and `dark_mass` (GeV), `bin` (1 for the first), `cross_section` (times acceptance, in the
     unit of the analysis file) and, if known, `relative_uncertainty`. Every pair of masses must come once with every
     bin; the pairs need not form a rectangle. Between them the ratio to the shipped rates is linear on triangles in
-    ln max(M, 2 m), the least energy that must be produced, and ln(m/M). Shipped rates are those of the same bin, or above
-    200 GeV of missing momentum when the bins are `regions`. Dark matter lighter than any in the table is taken as the lightest there if
-    that is below a tenth of the mediator's mass.
+    ln max(M, 2 m), the least energy that must be produced, and ln(m/M). Shipped rates are those of the same bin, or
+    above 200 GeV of missing momentum when the bins are `regions`. Dark matter lighter than any in the table is taken as
+    the lightest there if that is below a tenth of the mediator's mass.
 
     Parameters
     ----------
@@ -119,9 +122,7 @@ class OwnRates:
         reference = nearest_table(analysis.signature, analysis.sqrt_s)
         self._reference = ShippedRates(reference, analysis.bin_edges or (_USUAL_CUT, math.inf))
         self.files = (path, *self._reference.files)
-        columns = read_columns(
-            path, ("mediator_mass", "dark_mass", "bin", "cross_section"), ("relative_uncertainty",)
-        )
+        columns = read_columns(path, ("mediator_mass", "dark_mass", "bin", "cross_section"), ("relative_uncertainty",))
         problems = [
             Problem(name, f"must not be negative (row {int(np.argmin(values)) + 1})", float(values.min()))
             for name, values in columns.items()

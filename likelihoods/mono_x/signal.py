@@ -33,6 +33,8 @@ TABLES: Final = {
     ("mono-jet", 13.6): "mono_jet_13p6tev.npz",
     ("mono-jet", 14.0): "mono_jet_14tev.npz",
     ("mono-photon", 13.0): "mono_photon_13tev.npz",
+    ("mono-photon", 13.6): "mono_photon_13p6tev.npz",
+    ("mono-photon", 14.0): "mono_photon_14tev.npz",
 }
 """Shipped tables by signature and collision energy in TeV; a jet has |y| < 2.4, a photon |y| < 2.37."""
 

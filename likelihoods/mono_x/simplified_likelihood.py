@@ -27,13 +27,15 @@ from dataclasses import dataclass
 from typing import Any, Final, Self
 
 import numpy as np
+from numpy.typing import NDArray
 from scipy.special import gammaln, ndtri, xlogy
 from scipy.stats import qmc
 
 from scanfit.errors import InputError, Problem
 from scanfit.priors import FloatArray
 
-from .nuisance_removal import POSITIVE_WIDTH, maximise, sampled_volume
+from .nuisance_removal import POSITIVE_WIDTH, maximise
+from .nuisance_sampling import sampled_volume
 
 SAMPLES: Final = 2048
 """Points of the importance sampling."""
@@ -120,7 +122,7 @@ class CorrelatedBackground:
         """Number of bins."""
         return len(self.constant)
 
-    def near_zero(self) -> FloatArray:
+    def near_zero(self) -> NDArray[np.intp]:
         """Bins whose expectation falls below a hundredth of its centre within three standard deviations."""
         lowest = np.minimum(self.expected(-3.0 * np.ones(self.count)), self.constant)
         return np.flatnonzero(lowest < 0.01 * self.constant)
@@ -214,9 +216,7 @@ class SimplifiedLikelihood:
         other.__init__(self.background, counts)
         return other  # type: ignore[no-any-return]
 
-    def _sample(
-        self, signal: FloatArray, log_uncertainty: FloatArray | None, z: FloatArray
-    ) -> tuple[float, float]:
+    def _sample(self, signal: FloatArray, log_uncertainty: FloatArray | None, z: FloatArray) -> tuple[float, float]:
         if log_uncertainty is None:
             log_uncertainty = np.zeros(len(self.observed))
         b = self.background

@@ -29,16 +29,17 @@ SHOWER_FACTOR: Final = 1.12
 """Of the parton shower on the leading order: 1.07 to 1.14 with the generator of the tables."""
 
 SPIN_ZERO: Final = (
-    "mono-x production of anything but a spin-one mediator: a spin-zero one comes from gluons through a top loop, whose "
-    "amplitude with a hard jet is not tabulated here, and its heavy-top limit fails where the search looks, above the "
-    "top mass"
+    "mono-x production of anything but a spin-one mediator: a spin-zero one comes from gluons through a top loop, "
+    "whose amplitude with a hard jet is not tabulated here, and its heavy-top limit fails where the search looks, "
+    "above the top mass"
 )
 
 
 class Counts(Protocol):
     """What the term asks of its likelihood, simplified or full."""
 
-    sampled: bool
+    @property
+    def sampled(self) -> bool: ...
 
     @property
     def observed(self) -> FloatArray: ...
@@ -201,9 +202,7 @@ class MonoX(Term[Candidate]):
             self._likelihood, self.signal, "axial" if curve == "axial" else "vector",
             level=0.95 if level is None else level, points=points,
         )  # fmt: skip
-        return LimitCurve(
-            title=f"{self.analysis.title}: {self.curves[curve]}", caveats=self.caveats, **result
-        )
+        return LimitCurve(title=f"{self.analysis.title}: {self.curves[curve]}", caveats=self.caveats, **result)
 
     def _read_likelihood(self, path: Path) -> tuple[Counts, tuple[Path, ...]]:
         analysis = self.analysis
@@ -211,7 +210,7 @@ class MonoX(Term[Candidate]):
             background = read_background(analysis, path)
             return SimplifiedLikelihood(background, np.array(analysis.observed, dtype=float)), ()
         if not self._profiled:
-            rule = "a full likelihood can only be profiled: set `inner_nuisances = \"profile\"` in [run]"
+            rule = 'a full likelihood can only be profiled: set `inner_nuisances = "profile"` in [run]'
             raise InputError([Problem("workspace", rule)])
         workspace = path.parent / analysis.workspace
         likelihood = HistFactoryLikelihood(workspace, analysis.channels or (), analysis.measurement)

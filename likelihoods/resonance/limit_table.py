@@ -92,7 +92,9 @@ class LimitTable:
             if values.min() <= 0.0 and not (name == "width_ratio" and values.min() == 0.0)
         ]
         if "width_ratio" not in columns and self.file.width_ratio_below is None:
-            problems.append(Problem("width_ratio", "give this column, or the key `width_ratio_below` in the limit file"))
+            problems.append(
+                Problem("width_ratio", "give this column, or the key `width_ratio_below` in the limit file")
+            )
         if "acceptance" in columns and self.file.acceptance != 1.0:
             problems.append(Problem("acceptance", "cannot be both a column and a key of the limit file"))
         widths = columns.get("width_ratio", np.zeros_like(columns["mass"]))

@@ -72,5 +72,7 @@ def load_production(sqrt_s: float) -> MediatorProduction:
     """Read the shipped table at collision energy `sqrt_s` in TeV; raises InputError when there is none."""
     if sqrt_s not in TABLES:
         known = ", ".join(f"{energy:g}" for energy in TABLES)
-        raise InputError([Problem("sqrt_s", f"there is no production table at this energy; known: {known} TeV", sqrt_s)])
+        raise InputError(
+            [Problem("sqrt_s", f"there is no production table at this energy; known: {known} TeV", sqrt_s)]
+        )
     return MediatorProduction(Path(__file__).parents[1] / "tables" / TABLES[sqrt_s])

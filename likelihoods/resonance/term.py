@@ -82,9 +82,13 @@ class ResonanceSearch(Term[Candidate]):
         self.data_files = (*self.table.paths, self._production.path)
         self.caveats = (
             *((f"{file.title}: invented data",) if file.invented else ()),
-            f"{self.name} signal: leading order times {options.k_factor:g}, narrow width, universal quark couplings, no "
-            "interference; limits read as a Gaussian",
-            *(() if self.table.has_expected else (f"{file.title}: no expected limits, taken as equal to the observed",)),
+            f"{self.name} signal: leading order times {options.k_factor:g}, narrow width, universal quark couplings, "
+            "no interference; limits read as a Gaussian",
+            *(
+                ()
+                if self.table.has_expected
+                else (f"{file.title}: no expected limits, taken as equal to the observed",)
+            ),
             *((f"{file.title}: says nothing outside its table",) if file.outside == "ignore" else ()),
         )
 
@@ -144,7 +148,9 @@ class ResonanceSearch(Term[Candidate]):
         pull, sigma = place
         signal, spread = self.cross_section(mediator)
         limit = float(upper_limit(np.array(pull), file.level, file.statistic)) * sigma
-        note = f"{100.0 * file.level:g} % confidence, {file.statistic}; predicted within {100 * math.expm1(spread):.0f} %"
+        note = (
+            f"{100.0 * file.level:g} % confidence, {file.statistic}; predicted within {100 * math.expm1(spread):.0f} %"
+        )
         return (Observable(name, signal, limit=limit, unit="pb", note=note),)
 
     def simulate(self, prediction: Candidate, values: Mapping[str, float], rng: np.random.Generator) -> Self:

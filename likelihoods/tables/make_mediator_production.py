@@ -58,8 +58,8 @@ def cross_section(densities: PartonDensities, sqrt_s: float, mass: float, factor
 def make_table(sqrt_s: float) -> dict[str, Any]:
     """Return the table's arrays and its metadata, ready for ``numpy.savez_compressed``; `sqrt_s` in GeV."""
     # Towards the kinematic end the rate falls by many orders of magnitude: equal steps in ln(M/(sqrt s - M)).
-    ends = [np.log(mass / (sqrt_s - mass)) for mass in (_LIGHTEST, 0.77 * sqrt_s)]
-    odds = np.exp(np.linspace(*ends, 81))
+    first, last = (float(np.log(mass / (sqrt_s - mass))) for mass in (_LIGHTEST, 0.77 * sqrt_s))
+    odds = np.exp(np.linspace(first, last, 81))
     mass = sqrt_s * odds / (1.0 + odds)
     densities = PartonDensities(smallest_x=1.0e-5)
     table = np.array(

@@ -232,11 +232,11 @@ def test_mistakes_are_named(tmp_path):
     write(tmp_path)
     with pytest.raises(InputError, match='can only be profiled: set `inner_nuisances = "profile"`'):
         build(tmp_path, "marginal")
-    with pytest.raises(InputError, match="did you mean 'signal region'.*allowed: control region, signal region"):
+    with pytest.raises(InputError, match=r"did you mean 'signal region'.*allowed: control region, signal region"):
         build(tmp_path, old="signal region", new="signal regoin")
     with pytest.raises(InputError, match="the channels hold 2 bins, this file 4"):
         build(tmp_path, old="signal region", new="control region")
-    with pytest.raises(InputError, match="no such measurement.*allowed: invented"):
+    with pytest.raises(InputError, match=r"no such measurement.*allowed: invented"):
         build(tmp_path, old="overflow = true", new='overflow = true\nmeasurement = "other"')
     with pytest.raises(InputError, match="cannot be read"):
         build(tmp_path, old="workspace.json", new="nowhere.json")

@@ -256,7 +256,13 @@ def test_axial_reach_is_that_of_the_independent_estimate(luminosity, reach):
 
 @pytest.mark.parametrize(
     ("background", "deviation", "observed", "signal"),
-    [(2.0, 2.0, 0.0, 1.0), (10.0, 4.0, 6.0, 2.0), (10.0, 6.0, 25.0, 2.0), (1.0, 2.0, 3.0, 0.0), (206.0, 82.0, 202.0, 30.0)],
+    [
+        (2.0, 2.0, 0.0, 1.0),
+        (10.0, 4.0, 6.0, 2.0),
+        (10.0, 6.0, 25.0, 2.0),
+        (1.0, 2.0, 3.0, 0.0),
+        (206.0, 82.0, 202.0, 30.0),
+    ],
 )
 def test_marginal_with_a_background_that_reaches_zero_meets_quadrature(background, deviation, observed, signal):
     likelihood = one_bin(background, deviation, observed)

@@ -122,7 +122,7 @@ def test_caveats_and_files_name_the_table(tmp_path, table):
 def test_broken_tables_are_refused_with_a_clear_message(tmp_path, table):
     with pytest.raises(InputError, match=r"bin: the analysis has bins 1 to 2 \(given: 3"):
         build(tmp_path, table.assign(bin=table.bin + 1))
-    with pytest.raises(InputError, match="each of the 2 bins.*mediator 500, dark matter 80 GeV"):
+    with pytest.raises(InputError, match=r"each of the 2 bins.*mediator 500, dark matter 80 GeV"):
         build(tmp_path, table.drop(index=14))
     with pytest.raises(InputError, match=r"cross_section: must not be negative \(row 3\)"):
         build(tmp_path, table.assign(cross_section=table.cross_section.where(table.index != 2, -1.0)))
@@ -130,7 +130,7 @@ def test_broken_tables_are_refused_with_a_clear_message(tmp_path, table):
         build(tmp_path, table.assign(colour=1.0))
     with pytest.raises(InputError, match="must span an area"):
         build(tmp_path, table[table.dark_mass == 10.0])
-    with pytest.raises(InputError, match="must be a .csv or .parquet file"):
+    with pytest.raises(InputError, match=r"must be a \.csv or \.parquet file"):
         build(tmp_path, table, ("signal.csv", "signal.txt"))
     with pytest.raises(InputError, match="vanishes here"):
         build(tmp_path, pd.concat([table, table.tail(2).assign(dark_mass=6000.0)]))

@@ -210,5 +210,5 @@ def test_limit_on_the_coupling_brackets_what_is_expected():
     assert observed == pytest.approx(0.05, abs=2e-3)
     _, expected = term.confidence(candidate(mass=1.0, mediator_mass=mass, g_quark=float(curve.bands[1, 2])))
     assert expected == pytest.approx(0.05, abs=2e-3)
-    with pytest.raises(InputError, match="no such limit curve.*allowed: vector, axial"):
+    with pytest.raises(InputError, match=r"no such limit curve.*allowed: vector, axial"):
         term.limit_curve("scalar")

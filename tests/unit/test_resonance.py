@@ -149,7 +149,7 @@ def test_broken_tables_are_refused_with_a_clear_message(tmp_path, message, repla
 def test_broken_limit_files_are_refused(tmp_path):
     with pytest.raises(InputError, match="looks at quarks only"):
         build(write(tmp_path, limits=LIMITS.replace('"uu"', '"ee"')))
-    with pytest.raises(InputError, match="no production table at this energy; known: 13, 13.6, 14 TeV"):
+    with pytest.raises(InputError, match=r"no production table at this energy; known: 13, 13\.6, 14 TeV"):
         build(write(tmp_path, limits=LIMITS.replace("13.0", "8.0")))
     with pytest.raises(InputError, match="give this column, or the key `width_ratio_below`"):
         build(write(tmp_path, table="mass,observed\n1000,200\n2000,30\n"))
