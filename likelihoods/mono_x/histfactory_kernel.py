@@ -21,6 +21,8 @@ IntArray: TypeAlias = NDArray[np.int64]
 _MOST_STEPS: Final = 500
 _CONVERGED: Final = 1e-10
 """Expected gain in ln L below which the next step is the last."""
+_SMALLEST_RATE: Final = 1e-3
+"""Events below which a bin's expected curvature grows no further."""
 
 
 class Layout(NamedTuple):
@@ -190,7 +192,7 @@ def minimise(
 ) -> tuple[float, FloatArray]:
     """Return the smallest `cost` with every parameter between `low` and `high`, and where it is.
 
-    Newton's method with the expected curvature of the counts; parameters that a step would push out of the box stay at
+    Newton's method with the larger of observed and expected curvature of the counts; parameters that a step would push out of the box stay at
     its wall for that step. A parameter with ``low == high`` is fixed.
     """
     count = start.size
@@ -201,9 +203,9 @@ def minimise(
     for _ in range(_MOST_STEPS):
         gradient, hessian = np.zeros(count), np.zeros((count, count))
         for i in range(observed.size):
-            # Zero counts over an (almost) empty bin leave a constant slope and no curvature.
             tension = 1.0 - observed[i] / rate[i] if observed[i] > 0.0 else 1.0
-            weight = observed[i] / rate[i] ** 2 if observed[i] > 0.0 else 0.0
+            # Far above its count a bin has hardly any curvature, and steps would be wild: not less than expected then.
+            weight = observed[i] / rate[i] ** 2 if observed[i] > rate[i] else 1.0 / max(rate[i], _SMALLEST_RATE)
             for p in range(count):
                 if slope[i, p] != 0.0:
                     gradient[p] += tension * slope[i, p]
@@ -237,7 +239,7 @@ def minimise(
             for p in range(count):
                 trial[p] = min(max(theta[p] - size * step[p], low[p]), high[p])
             new_value = cost(model, constraints, observed, trial, signal, spread, new_rate, new_slope)
-            if new_value <= value - 1e-4 * size * gain or (gain < _CONVERGED and new_value < math.inf):
+            if new_value <= value - 1e-4 * size * gain or (gain < _CONVERGED and new_value <= value + _CONVERGED):
                 break
             size *= 0.5
             if size < 1e-12:

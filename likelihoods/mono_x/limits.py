@@ -22,7 +22,7 @@ LIGHT_DARK_MASS: Final = 1.0
 LARGEST_COUPLING: Final = math.sqrt(4.0 * math.pi)
 
 _MASSES: Final = (100.0, 4000.0)
-_COUPLINGS: Final = np.geomspace(3e-3, LARGEST_COUPLING, 36)
+_COUPLINGS: Final = np.geomspace(1e-4, LARGEST_COUPLING, 54)
 
 
 class Profiled(Protocol):

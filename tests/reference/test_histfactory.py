@@ -133,6 +133,28 @@ def test_profile_likelihood_ratios_agree_with_pyhf_to_1e_4(likelihood):
     np.testing.assert_allclose(np.diff(ours), np.diff(theirs), rtol=0.0, atol=1e-4)
 
 
+@pytest.mark.parametrize(
+    ("signal", "counts"),
+    [
+        ([0.5, 5.0, 30.0, 1.0], [290.0, 161.0, 133.0, 80.0, 31.0, 9.0]),
+        ([0.0, 0.0, 40.0, 30.0], [333.0, 140.0, 120.0, 66.0, 44.0, 3.0]),
+        ([300.0, 5.0, 0.0, 0.5], [280.0, 160.0, 141.0, 70.0, 33.0, 14.0]),
+        ([0.0, 5.0, 300.0, 30.0], [2.0, 0.0, 0.0, 0.0, 310.0, 0.0]),
+        ([34.0, 6.0, 34.0, 0.6], [2.0, 0.0, 0.0, 0.0, 310.0, 0.0]),
+    ],
+)
+def test_other_data_agree_as_well(likelihood, signal, counts):
+    """Counts of control and signal region; the last two are absurd, and pull parameters to the walls of their box."""
+    ours = likelihood._with_data(np.array(counts)).profile(np.array(signal))
+    model, data = reference_model(np.array(signal))
+    data = [*counts, *model.config.auxdata]
+    fitted = float(pyhf.infer.mle.fixed_poi_fit(1.0, data, model, return_fitted_val=True)[1])
+    # Constraints at their peaks, which the two normalise differently.
+    init = np.array(model.config.suggested_init())
+    peaks = float(model.constraint_logpdf(np.array(model.config.auxdata), init))
+    assert 2.0 * (ours + peaks) == pytest.approx(-fitted, abs=1e-4)
+
+
 def test_full_values_agree_with_pyhf_once_constraints_are_normalised(likelihood):
     """At arbitrary parameters; pyhf's Gaussians carry -ln(sqrt(2 pi) sigma) and its Poissons their peak height."""
     model, data = reference_model(np.zeros(4))
