@@ -56,6 +56,36 @@ class Quantity:
         return f"{symbol} [{self.unit}]" if self.unit else symbol
 
 
+@dataclass(frozen=True)
+class ExclusionPlane:
+    """What one search alone excludes in a plane: confidence (CLs) of every point, small where it is excluded.
+
+    `observed` and `expected` (the median without signal) have shape (n_y, n_x); a point is excluded at confidence level
+    L where they are below 1 - L, and NaN where the search refuses it.
+    """
+
+    title: str
+    fixed: str
+    """What is held fixed, in words."""
+    x: Quantity
+    y: Quantity
+    x_values: FloatArray
+    y_values: FloatArray
+    observed: FloatArray
+    expected: FloatArray
+    caveats: tuple[str, ...] = ()
+
+    def table(self) -> dict[str, FloatArray]:
+        """Columns of the plane, one row a point; ready for ``pandas.DataFrame``."""
+        x, y = np.meshgrid(self.x_values, self.y_values)
+        return {
+            self.x.name: x.ravel(),
+            self.y.name: y.ravel(),
+            "cls_observed": self.observed.ravel(),
+            "cls_expected": self.expected.ravel(),
+        }
+
+
 @runtime_checkable
 class Prediction(Protocol):
     """What a model predicts at one point."""
@@ -131,50 +161,17 @@ class LimitCurve:
     """Upper limits of one search alone.
 
     Arrays have shape (n,); `bands` has shape (n, 5): quantiles 2.5, 16, 50, 84, 97.5 % of background-only limits, or
-    None.
+    None. Infinite where the search says nothing.
     """
 
     title: str
     x: Quantity
-    """Name, unit, symbol, scale of the abscissa."""
     y: Quantity
-    """The same of the limit."""
     level: float
-    """0.90, 0.95"""
     x_values: FloatArray
     observed: FloatArray | None
     bands: FloatArray | None
     caveats: tuple[str, ...] = ()
-
-
-@dataclass(frozen=True)
-class ExclusionPlane:
-    """What one search alone excludes in a plane: confidence (CLs) of every point, small where it is excluded.
-
-    `observed` and `expected` (the median without signal) have shape (n_y, n_x); a point is excluded at confidence level
-    L where they are below 1 - L, and NaN where the search refuses it.
-    """
-
-    title: str
-    fixed: str
-    """What is held fixed, in words."""
-    x: Quantity
-    y: Quantity
-    x_values: FloatArray
-    y_values: FloatArray
-    observed: FloatArray
-    expected: FloatArray
-    caveats: tuple[str, ...] = ()
-
-    def table(self) -> dict[str, FloatArray]:
-        """Columns of the plane, one row a point; ready for ``pandas.DataFrame``."""
-        x, y = np.meshgrid(self.x_values, self.y_values)
-        return {
-            self.x.name: x.ravel(),
-            self.y.name: y.ravel(),
-            "cls_observed": self.observed.ravel(),
-            "cls_expected": self.expected.ravel(),
-        }
 
 
 class Term(ABC, Generic[PredictionT]):
@@ -194,7 +191,7 @@ class Term(ABC, Generic[PredictionT]):
     data_files: tuple[Path, ...] = ()
     """Every file the term read; they are part of the run's fingerprint."""
     curves: ClassVar[Mapping[str, str]] = {}
-    """Name of each limit curve with a one-line description."""
+    """Names of the upper limits that the term can draw alone, each with one line that describes it."""
 
     @abstractmethod
     def __init__(self, options: Any, context: BuildContext) -> None: ...
@@ -230,27 +227,27 @@ class Term(ABC, Generic[PredictionT]):
         pseudo_experiments: int = 200,
         rng: np.random.Generator | None = None,
     ) -> LimitCurve:
-        """Upper limits of this search alone.
+        """Upper limits of this search alone, observed and expected without a signal.
 
         Parameters
         ----------
         curve : str
-            A name among `curves`.
+            One of `curves`.
         level : float, optional
-            Confidence level; the term's own by default.
+            Confidence or credibility; None for what the field usually quotes.
         points : int
-            Length of the curve.
+            Points of the abscissa.
         pseudo_experiments : int
-            Background-only data sets behind the bands, where they are drawn.
+            Background-only data sets behind the bands; 0 leaves the bands out.
         rng : Generator, optional
-            Their randomness.
+            Source of the pseudo-data; None for a fixed seed.
 
         Raises
         ------
         InputError
-            If there is no such curve.
+            If the term has no curve of this name.
         """
-        raise InputError([Problem("curve", "this term has no such limit curve", curve, tuple(self.curves))], self.name)
+        raise InputError([Problem("curve", f"{self.name} has no limit curve of this name", curve, tuple(self.curves))])
 
 
 class Evaluate(Protocol):

@@ -192,8 +192,8 @@ def minimise(
 ) -> tuple[float, FloatArray]:
     """Return the smallest `cost` with every parameter between `low` and `high`, and where it is.
 
-    Newton's method with the larger of observed and expected curvature of the counts; parameters that a step would push out of the box stay at
-    its wall for that step. A parameter with ``low == high`` is fixed.
+    Newton's method with the larger of observed and expected curvature of the counts; parameters that a step would push
+    out of the box stay at its wall for that step. A parameter with ``low == high`` is fixed.
     """
     count = start.size
     theta, trial = start.copy(), start.copy()

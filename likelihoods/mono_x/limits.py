@@ -66,12 +66,12 @@ def coupling_curve(
 ) -> dict[str, Any]:
     """Limit on the quark coupling against mediator mass; the fields of a `LimitCurve` but title and caveats.
 
-    NaN where no coupling up to sqrt(4 pi) is excluded, or the analysis refuses the mass.
+    Infinite where no coupling up to sqrt(4 pi) is excluded, or the analysis refuses the mass.
     """
     masses = np.geomspace(*_MASSES, points)
     background = likelihood.asimov(np.zeros_like(signal_shape(signal, coupling)))
     needed = limits_expected(level, "cls")
-    limits = np.full((points, 6), math.nan)
+    limits = np.full((points, 6), math.inf)
     for row, mass in enumerate(masses):
         significance, log_cls = [], []
         for g_quark in _COUPLINGS:
@@ -111,10 +111,12 @@ def signal_shape(
 
 
 def _crossing(x: FloatArray, y: FloatArray, level: float) -> float:
-    """exp(x) where `y` first rises through `level`, by linear interpolation of ln y; NaN where it never does."""
+    """exp(x) where `y` first rises through `level`, by linear interpolation of ln y; infinite where it never does."""
     above = np.flatnonzero(y >= level)
-    if len(above) == 0 or above[0] == 0:
-        return math.nan
+    if len(above) == 0:
+        return math.inf
     high = int(above[0])
+    if high == 0:
+        return math.exp(x[0])
     low_y, high_y = np.log(np.maximum(y[[high - 1, high]], 1e-12))
     return math.exp(x[high - 1] + (math.log(level) - low_y) / (high_y - low_y) * (x[high] - x[high - 1]))

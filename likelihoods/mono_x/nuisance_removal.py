@@ -172,7 +172,7 @@ def expectations(
 
 @njit(cache=True, error_model="numpy")
 def cost(observed: FloatArray, expectations: FloatArray, z: FloatArray) -> float:
-    """f at `z`, given the expectations there."""
+    """What is minimised, at `z` and given the expectations there."""
     total = 0.0
     for i in range(observed.size):
         rate = expectations[0, i]

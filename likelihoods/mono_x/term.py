@@ -202,6 +202,8 @@ class MonoX(Term[Candidate]):
             self._likelihood, self.signal, "axial" if curve == "axial" else "vector",
             level=0.95 if level is None else level, points=points,
         )  # fmt: skip
+        if not pseudo_experiments:
+            result["bands"] = None
         return LimitCurve(title=f"{self.analysis.title}: {self.curves[curve]}", caveats=self.caveats, **result)
 
     def _read_likelihood(self, path: Path) -> tuple[Counts, tuple[Path, ...]]:

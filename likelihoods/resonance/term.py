@@ -190,12 +190,12 @@ class ResonanceSearch(Term[Candidate]):
             level=level,
             x_values=masses,
             observed=limits[:, 0],
-            bands=limits[:, 1:] if self.table.has_expected else None,
+            bands=limits[:, 1:] if self.table.has_expected and pseudo_experiments else None,
             caveats=(*self.caveats, *((f"coupled to {which}",) if curve == "coupling" else ())),
         )
 
     def _limits_at(self, mass: float, curve: str, level: float) -> FloatArray:
-        """Observed limit and its expected quantiles, shape (6,); NaN where no coupling in range is excluded."""
+        """Observed limit and its expected quantiles, shape (6,); infinite where no coupling in range is excluded."""
         statistic = self.table.file.statistic
         if curve == "cross-section":
             pull, sigma = self._place_at(mass, 0.0)
@@ -214,10 +214,10 @@ class ResonanceSearch(Term[Candidate]):
             observed = upper_limit(np.array([pull]), level, statistic)
             ratios.append(strength / np.concatenate([observed, limits_expected(level, statistic)]))
             inside.append(coupling)
+        if not inside:
+            return np.full(6, math.inf)
         grid = np.log(np.array(ratios))
-        return np.array(
-            [math.exp(np.interp(0.0, grid[:, k], np.log(inside), left=math.nan, right=math.nan)) for k in range(6)]
-        )
+        return np.array([math.exp(np.interp(0.0, grid[:, k], np.log(inside), right=math.inf)) for k in range(6)])
 
     def _times_k(self, cross_section: float) -> float:
         return self.options.k_factor * cross_section

@@ -199,6 +199,14 @@ def test_mixed_couplings_add_vector_and_axial_rates(term):
     np.testing.assert_allclose(blind, vector, rtol=1e-12)
 
 
+def test_heavy_mediators_and_left_out_bands_are_marked():
+    """At 4 TeV no coupling up to sqrt(4 pi) is excluded in the invented search: its limit is infinite."""
+    curve = build("profile").limit_curve("vector", points=2, pseudo_experiments=0)
+    assert curve.bands is None
+    assert 0.0 < curve.observed[0] < 0.1
+    assert curve.observed[1] == math.inf
+
+
 def test_limit_on_the_coupling_brackets_what_is_expected():
     term = build("profile")
     curve = term.limit_curve("axial", points=3)
@@ -210,5 +218,5 @@ def test_limit_on_the_coupling_brackets_what_is_expected():
     assert observed == pytest.approx(0.05, abs=2e-3)
     _, expected = term.confidence(candidate(mass=1.0, mediator_mass=mass, g_quark=float(curve.bands[1, 2])))
     assert expected == pytest.approx(0.05, abs=2e-3)
-    with pytest.raises(InputError, match=r"no such limit curve.*allowed: vector, axial"):
+    with pytest.raises(InputError, match=r"no limit curve of this name.*allowed: vector, axial"):
         term.limit_curve("scalar")

@@ -178,8 +178,17 @@ def test_curves_cross_the_limits_they_come_from():
     assert cross.observed[0] == pytest.approx(first.observed / 0.5, rel=1e-3)
     assert cross.bands[0, 2] == pytest.approx(first.expected / 0.5, rel=1e-6)
     assert any("invented" in caveat for caveat in cross.caveats)
-    with pytest.raises(InputError, match="no such limit curve"):
+    with pytest.raises(InputError, match="no limit curve of this name"):
         term.limit_curve("cross")
+
+
+def test_curves_are_infinite_where_nothing_is_excluded_within_the_table(tmp_path):
+    weak = build(write(tmp_path, table=TABLE.replace(" 30, 36", " 3e9, 3e9").replace(" 50, 60", " 5e9, 5e9")))
+    assert weak.limit_curve("coupling", points=2).observed[1] == math.inf
+    narrow_only = LIMITS.replace('unit = "fb"', 'unit = "fb"\nwidth_ratio_below = 1e-12')
+    only = build(write(tmp_path, limits=narrow_only, table="mass,observed\n1000,200\n2000,30\n"))
+    assert np.all(only.limit_curve("coupling", points=3).observed == math.inf)
+    assert only.limit_curve("cross-section", points=3).bands is None
 
 
 def test_expected_and_simulated_data_favour_the_point_that_made_them():
