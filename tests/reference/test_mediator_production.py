@@ -35,9 +35,9 @@ def z_cross_section() -> float:
 def test_z_bosons_come_as_often_as_from_the_event_generator():
     """pythia8mc 8.317.2, WeakSingleBoson:ffbar2gmZ (Z only), PDF:pSet = 13, 66-116 GeV: 1401.5 +- 6.0 pb.
 
-    Three per cent: the generator's couplings run, and interpolation in the mass is linear here.
+    1.5 %: the generator's couplings run with the mass, and interpolation in the mass is linear here.
     """
-    assert z_cross_section() == pytest.approx(1401.5, rel=0.03)
+    assert z_cross_section() == pytest.approx(1401.5, rel=0.015)
 
 
 def test_z_bosons_come_a_little_less_often_than_measured():
