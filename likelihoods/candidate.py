@@ -10,7 +10,7 @@ import math
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass, field
 from functools import cached_property
-from typing import ClassVar, Final, Literal, Self
+from typing import ClassVar, Final, Literal, NamedTuple, Self
 
 import numpy as np
 from pydantic import model_validator
@@ -112,9 +112,21 @@ class NucleonCouplings:
     a_neutron: float = 0.0
 
 
+class Current(NamedTuple):
+    """Couplings of a spin-one mediator to either vector or axial currents."""
+
+    axial: bool
+    g_quark: float
+    g_dark: float
+    g_lepton: float
+
+
 @dataclass(frozen=True)
 class SpinOneMediator:
-    """A spin-one mediator with universal couplings; all decay widths follow from it (`mediator_widths`)."""
+    """A spin-one mediator with universal couplings; all decay widths follow from it (`mediator_widths`).
+
+    The last three are couplings of the other kind, axial beside vector or vector beside axial; zero when it is pure.
+    """
 
     mass: float
     width: float
@@ -122,6 +134,27 @@ class SpinOneMediator:
     g_quark: float
     g_dark: float
     g_lepton: float
+    other_g_quark: float = 0.0
+    other_g_dark: float = 0.0
+    other_g_lepton: float = 0.0
+
+    @property
+    def currents(self) -> tuple[Current, ...]:
+        """The vector and the axial current, as far as they couple to anything; at least one."""
+        axial = self.coupling == "axial"
+        first = Current(axial, self.g_quark, self.g_dark, self.g_lepton)
+        other = Current(not axial, self.other_g_quark, self.other_g_dark, self.other_g_lepton)
+        return (first, other) if any(other[1:]) else (first,)
+
+    @property
+    def g_quark_squared(self) -> float:
+        """What production from massless quarks is proportional to: g_V^2 + g_A^2."""
+        return self.g_quark**2 + self.other_g_quark**2
+
+    @property
+    def g_neutrino(self) -> float:
+        """Coupling of left-handed neutrinos, g_V - g_A of the leptons; its sign does not matter here."""
+        return self.g_lepton - self.other_g_lepton
 
 
 @dataclass(frozen=True)

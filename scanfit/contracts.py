@@ -15,6 +15,7 @@ from typing import Any, ClassVar, Generic, Literal, Protocol, Self, TypeVar, run
 
 import numpy as np
 
+from scanfit.errors import InputError, Problem
 from scanfit.priors import FloatArray
 from scanfit.space import Parameter
 from scanfit.validation import Options
@@ -53,6 +54,36 @@ class Quantity:
         """Symbol with unit, for an axis."""
         symbol = f"${self.symbol}$" if self.symbol else self.name.replace("_", " ")
         return f"{symbol} [{self.unit}]" if self.unit else symbol
+
+
+@dataclass(frozen=True)
+class ExclusionPlane:
+    """What one search alone excludes in a plane: confidence (CLs) of every point, small where it is excluded.
+
+    `observed` and `expected` (the median without signal) have shape (n_y, n_x); a point is excluded at confidence level
+    L where they are below 1 - L, and NaN where the search refuses it.
+    """
+
+    title: str
+    fixed: str
+    """What is held fixed, in words."""
+    x: Quantity
+    y: Quantity
+    x_values: FloatArray
+    y_values: FloatArray
+    observed: FloatArray
+    expected: FloatArray
+    caveats: tuple[str, ...] = ()
+
+    def table(self) -> dict[str, FloatArray]:
+        """Columns of the plane, one row a point; ready for ``pandas.DataFrame``."""
+        x, y = np.meshgrid(self.x_values, self.y_values)
+        return {
+            self.x.name: x.ravel(),
+            self.y.name: y.ravel(),
+            "cls_observed": self.observed.ravel(),
+            "cls_expected": self.expected.ravel(),
+        }
 
 
 @runtime_checkable
@@ -167,6 +198,24 @@ class Observable:
     note: str = ""
 
 
+@dataclass(frozen=True)
+class LimitCurve:
+    """Upper limits of one search alone.
+
+    Arrays have shape (n,); `bands` has shape (n, 5): quantiles 2.5, 16, 50, 84, 97.5 % of background-only limits, or
+    None. Infinite where the search says nothing.
+    """
+
+    title: str
+    x: Quantity
+    y: Quantity
+    level: float
+    x_values: FloatArray
+    observed: FloatArray | None
+    bands: FloatArray | None
+    caveats: tuple[str, ...] = ()
+
+
 class Term(ABC, Generic[PredictionT]):
     """One search: data, and the likelihood of the data given a prediction.
 
@@ -183,6 +232,8 @@ class Term(ABC, Generic[PredictionT]):
     """What a reader of the result must know: invented data, an approximate likelihood, an extrapolated table."""
     data_files: tuple[Path, ...] = ()
     """Every file the term read; they are part of the run's fingerprint."""
+    curves: ClassVar[Mapping[str, str]] = {}
+    """Names of the upper limits that the term can draw alone, each with one line that describes it."""
 
     @abstractmethod
     def __init__(self, options: Any, context: BuildContext) -> None: ...
@@ -208,6 +259,37 @@ class Term(ABC, Generic[PredictionT]):
     def expected(self, prediction: PredictionT, values: Mapping[str, float]) -> Self:
         """Return the same term holding the expected (Asimov) data of this point."""
         raise NotImplementedError(f"{self.name} has no expected data")
+
+    def limit_curve(
+        self,
+        curve: str,
+        *,
+        level: float | None = None,
+        points: int = 40,
+        pseudo_experiments: int = 200,
+        rng: np.random.Generator | None = None,
+    ) -> LimitCurve:
+        """Upper limits of this search alone, observed and expected without a signal.
+
+        Parameters
+        ----------
+        curve : str
+            One of `curves`.
+        level : float, optional
+            Confidence or credibility; None for what the field usually quotes.
+        points : int
+            Points of the abscissa.
+        pseudo_experiments : int
+            Background-only data sets behind the bands; 0 leaves the bands out.
+        rng : Generator, optional
+            Source of the pseudo-data; None for a fixed seed.
+
+        Raises
+        ------
+        InputError
+            If the term has no curve of this name.
+        """
+        raise InputError([Problem("curve", f"{self.name} has no limit curve of this name", curve, tuple(self.curves))])
 
 
 class Evaluate(Protocol):

@@ -60,25 +60,25 @@ def maximise(
     now, then = np.empty((4, n)), np.empty((4, n))
     gradient, hessian = np.empty(n + 1), np.empty((n + 1, n + 1))
     z[n] = _start(signal, spread, constant, slope)
-    _expectations(signal, spread, constant, slope, curvature, lower, z, now)
-    value = _cost(observed, now, z)
+    expectations(signal, spread, constant, slope, curvature, lower, z, now)
+    value = cost(observed, now, z)
     for _ in range(_MOST_STEPS):
-        _derivatives(observed, spread, lower, z, now, True, gradient, hessian)
-        if not _factorise(hessian):
-            _derivatives(observed, spread, lower, z, now, False, gradient, hessian)
-            _factorise(hessian)
+        derivatives(observed, spread, lower, z, now, True, gradient, hessian)
+        if not factorise(hessian):
+            derivatives(observed, spread, lower, z, now, False, gradient, hessian)
+            factorise(hessian)
         step = gradient.copy()
         _solve_lower(hessian, step)
         gain = 0.0
         for k in range(n + 1):
             gain += step[k] ** 2
-        _solve_upper(hessian, step)
+        solve_upper(hessian, step)
         size = _largest_step(spread, lower, step, now)
         while True:
             for k in range(n + 1):
                 trial[k] = z[k] - size * step[k]
-            _expectations(signal, spread, constant, slope, curvature, lower, trial, then)
-            new_value = _cost(observed, then, trial)
+            expectations(signal, spread, constant, slope, curvature, lower, trial, then)
+            new_value = cost(observed, then, trial)
             # Below the convergence limit rounding decides the comparison: take the step.
             if gain < _CONVERGED or new_value <= value - 1e-4 * size * gain:
                 break
@@ -94,10 +94,10 @@ def maximise(
 
     log_volume = correction = 0.0
     if volume:
-        _derivatives(observed, spread, lower, z, now, True, gradient, hessian)
-        if not _factorise(hessian):
-            _derivatives(observed, spread, lower, z, now, False, gradient, hessian)
-            _factorise(hessian)
+        derivatives(observed, spread, lower, z, now, True, gradient, hessian)
+        if not factorise(hessian):
+            derivatives(observed, spread, lower, z, now, False, gradient, hessian)
+            factorise(hessian)
         for k in range(n + 1):
             log_volume -= math.log(hessian[k, k])
         correction = _next_order(observed, spread, lower, now, hessian)
@@ -141,7 +141,7 @@ def _largest_step(spread: FloatArray, lower: FloatArray, step: FloatArray, expec
 
 
 @njit(cache=True, error_model="numpy")
-def _expectations(
+def expectations(
     signal: FloatArray,
     spread: FloatArray,
     constant: FloatArray,
@@ -151,6 +151,7 @@ def _expectations(
     z: FloatArray,
     out: FloatArray,
 ) -> None:
+    """Fill `out`, shape (4, n): expected counts, background's first and second derivative by theta, signal."""
     n = signal.size
     for i in range(n):
         theta = 0.0
@@ -170,7 +171,8 @@ def _expectations(
 
 
 @njit(cache=True, error_model="numpy")
-def _cost(observed: FloatArray, expectations: FloatArray, z: FloatArray) -> float:
+def cost(observed: FloatArray, expectations: FloatArray, z: FloatArray) -> float:
+    """What is minimised, at `z` and given the expectations there."""
     total = 0.0
     for i in range(observed.size):
         rate = expectations[0, i]
@@ -183,7 +185,7 @@ def _cost(observed: FloatArray, expectations: FloatArray, z: FloatArray) -> floa
 
 
 @njit(cache=True, error_model="numpy")
-def _derivatives(
+def derivatives(
     observed: FloatArray,
     spread: FloatArray,
     lower: FloatArray,
@@ -220,7 +222,7 @@ def _derivatives(
 
 
 @njit(cache=True, error_model="numpy")
-def _factorise(matrix: FloatArray) -> bool:
+def factorise(matrix: FloatArray) -> bool:
     """Cholesky factor in place of the lower triangle; False when the matrix is not positive definite."""
     for j in range(matrix.shape[0]):
         for k in range(j + 1):
@@ -245,7 +247,8 @@ def _solve_lower(lower: FloatArray, vector: FloatArray) -> None:
 
 
 @njit(cache=True, error_model="numpy")
-def _solve_upper(lower: FloatArray, vector: FloatArray) -> None:
+def solve_upper(lower: FloatArray, vector: FloatArray) -> None:
+    """Solve with the transpose of a lower triangle, in place."""
     for j in range(vector.size - 1, -1, -1):
         for k in range(j + 1, vector.size):
             vector[j] -= lower[k, j] * vector[k]

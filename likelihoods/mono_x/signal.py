@@ -33,6 +33,8 @@ TABLES: Final = {
     ("mono-jet", 13.6): "mono_jet_13p6tev.npz",
     ("mono-jet", 14.0): "mono_jet_14tev.npz",
     ("mono-photon", 13.0): "mono_photon_13tev.npz",
+    ("mono-photon", 13.6): "mono_photon_13p6tev.npz",
+    ("mono-photon", 14.0): "mono_photon_14tev.npz",
 }
 """Shipped tables by signature and collision energy in TeV; a jet has |y| < 2.4, a photon |y| < 2.37."""
 
@@ -88,15 +90,21 @@ def load_table(signature: str, sqrt_s: float) -> SignalTable:
 
 def read_table(path: Path) -> SignalTable:
     """Read the table in `path`; raises InputError when its bytes are not those that were written."""
+    arrays, metadata = read_arrays(path, ("cross_section", "cut", "virtuality"))
+    return SignalTable(**arrays, metadata=metadata, path=path)
+
+
+def read_arrays(path: Path, names: tuple[str, ...]) -> tuple[dict[str, FloatArray], dict[str, Any]]:
+    """Read a generated table's arrays and metadata; raises InputError when they are not those that were written."""
     try:
         with path.open("rb") as stream, np.load(stream, allow_pickle=False) as file:
             metadata = json.loads(str(file["metadata"]))
-            arrays = {name: file[name] for name in ("cross_section", "cut", "virtuality")}
+            arrays = {name: file[name] for name in names}
     except (OSError, ValueError, KeyError, EOFError, zipfile.BadZipFile) as error:
-        raise InputError([Problem("", f"the signal table cannot be read: {error}")], str(path)) from None
+        raise InputError([Problem("", f"the table cannot be read: {error}")], str(path)) from None
     if checksum(arrays) != metadata["sha256"]:
-        raise InputError([Problem("", "the signal table is damaged: its checksum does not hold")], str(path))
-    return SignalTable(**arrays, metadata=metadata, path=path)
+        raise InputError([Problem("", "the table is damaged: its checksum does not hold")], str(path))
+    return arrays, metadata
 
 
 def checksum(arrays: Mapping[str, FloatArray]) -> str:

@@ -13,21 +13,32 @@ log-normal shape. Writing theta = L z with rho = L L^T makes every nuisance a st
 Backgrounds are kept positive by n -> (n + sqrt(n^2 + 4 e^2))/2 with e = b/1000, a smooth form of clipping at zero.
 
 Profiled: the maximum over z, with the constraint normalised to one at its peak. Marginalised: the integral over the
-normalised density of z, by Laplace's method with the next order of the expansion (third and fourth derivatives).
+normalised density of z, by Laplace's method with the next order of the expansion (third and fourth derivatives); or,
+where a background's uncertainty reaches down to zero within three standard deviations and no expansion holds, by
+importance sampling on a fixed set of quasi-random points, some ten times slower.
 """
 
 from __future__ import annotations
 
+import copy
+import functools
 import math
 from dataclasses import dataclass
+from typing import Any, Final, Self
 
 import numpy as np
-from scipy.special import gammaln, xlogy
+from numpy.typing import NDArray
+from scipy.special import gammaln, ndtri, xlogy
+from scipy.stats import qmc
 
 from scanfit.errors import InputError, Problem
 from scanfit.priors import FloatArray
 
 from .nuisance_removal import POSITIVE_WIDTH, maximise
+from .nuisance_sampling import sampled_volume
+
+SAMPLES: Final = 2048
+"""Points of the importance sampling."""
 
 
 @dataclass(frozen=True)
@@ -111,6 +122,11 @@ class CorrelatedBackground:
         """Number of bins."""
         return len(self.constant)
 
+    def near_zero(self) -> NDArray[np.intp]:
+        """Bins whose expectation falls below a hundredth of its centre within three standard deviations."""
+        lowest = np.minimum(self.expected(-3.0 * np.ones(self.count)), self.constant)
+        return np.flatnonzero(lowest < 0.01 * self.constant)
+
     def expected(self, theta: FloatArray) -> FloatArray:
         """Expected counts at nuisance parameters `theta`, shape (n,), kept positive as described above."""
         raw = self.constant + self.slope * theta + self.curvature * theta**2
@@ -143,6 +159,8 @@ class SimplifiedLikelihood:
         # ln Poisson at its largest, where the expectation equals the count; the kernel adds the (small) rest.
         counts = self.observed
         self._saturated = float((xlogy(counts, counts) - counts - gammaln(counts + 1.0)).sum())
+        self.sampled = len(background.near_zero()) > 0
+        """Whether the marginal likelihood is sampled rather than expanded."""
 
     def profile(self, signal: FloatArray, log_uncertainty: FloatArray | None = None) -> float:
         """Maximum of ln L over all nuisances.
@@ -158,6 +176,9 @@ class SimplifiedLikelihood:
 
     def marginal(self, signal: FloatArray, log_uncertainty: FloatArray | None = None) -> float:
         """Ln of the likelihood integrated over all nuisances; arguments as for `profile`."""
+        if self.sampled:
+            peak, _, _, z = self._solve(signal, log_uncertainty, volume=False)
+            return self._saturated + peak + self._sample(signal, log_uncertainty, z)[0]
         peak, log_volume, correction, _ = self._solve(signal, log_uncertainty, volume=True)
         return self._saturated + peak + log_volume + correction
 
@@ -170,6 +191,40 @@ class SimplifiedLikelihood:
         z = self._solve(signal, log_uncertainty, volume=False)[3]
         return self.background.expected(self.background.lower @ z[:-1])
 
+    def effective_samples(self, signal: FloatArray, log_uncertainty: FloatArray | None = None) -> float:
+        """Effective number of points of the importance sampling, at most `SAMPLES`."""
+        z = self._solve(signal, log_uncertainty, volume=False)[3]
+        return self._sample(signal, log_uncertainty, z)[1]
+
+    def central(self) -> tuple[FloatArray, FloatArray]:
+        """Background with every nuisance at its centre, and its standard deviation."""
+        b = self.background
+        return b.expected(np.zeros(b.count)), np.hypot(b.slope, math.sqrt(2.0) * b.curvature)
+
+    def drawn(self, signal: FloatArray, log_uncertainty: FloatArray, rng: np.random.Generator) -> Self:
+        """Return pseudo-data: nuisances from their densities, then Poisson counts."""
+        mean = self.background.expected(self.background.lower @ rng.standard_normal(self.background.count))
+        mean = mean + signal * np.exp(log_uncertainty * rng.standard_normal())
+        return self._with_counts(rng.poisson(mean).astype(float))
+
+    def asimov(self, signal: FloatArray) -> Self:
+        """Return the counts expected with every nuisance at its centre."""
+        return self._with_counts(self.central()[0] + signal)
+
+    def _with_counts(self, counts: FloatArray) -> Self:
+        other: Any = copy.copy(self)
+        other.__init__(self.background, counts)
+        return other  # type: ignore[no-any-return]
+
+    def _sample(self, signal: FloatArray, log_uncertainty: FloatArray | None, z: FloatArray) -> tuple[float, float]:
+        if log_uncertainty is None:
+            log_uncertainty = np.zeros(len(self.observed))
+        b = self.background
+        volume, effective = sampled_volume(
+            self.observed, signal, log_uncertainty, b.constant, b.slope, b.curvature, b.lower, z, _nodes(b.count + 1)
+        )
+        return volume, effective
+
     def _solve(
         self, signal: FloatArray, log_uncertainty: FloatArray | None, volume: bool
     ) -> tuple[float, float, float, FloatArray]:
@@ -180,3 +235,10 @@ class SimplifiedLikelihood:
             self.observed, signal, log_uncertainty, b.constant, b.slope, b.curvature, b.lower, volume
         )
         return peak, log_volume, correction, z
+
+
+@functools.lru_cache
+def _nodes(dimension: int) -> FloatArray:
+    """Standard normal variates behind the importance sampling, shape (SAMPLES, dimension): always the same."""
+    points = qmc.Sobol(dimension, scramble=True, rng=np.random.default_rng(1)).random(SAMPLES)
+    return np.ascontiguousarray(ndtri(np.clip(points, 1e-12, 1.0 - 1e-12)))

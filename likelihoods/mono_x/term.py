@@ -1,4 +1,4 @@
-"""Likelihood of a search for dark matter recoiling against a jet or a photon, for models with a spin-one mediator."""
+"""The term: a search for missing momentum with a spin-one mediator."""
 
 from __future__ import annotations
 
@@ -6,25 +6,53 @@ import copy
 import math
 from collections.abc import Mapping, Sequence
 from pathlib import Path
-from typing import Annotated, Any, ClassVar, Final, Self
+from typing import Annotated, Any, ClassVar, Final, Protocol, Self
 
 import numpy as np
 from pydantic import Field, PositiveFloat
 
-from scanfit.contracts import BuildContext, Observable, Term
-from scanfit.errors import InputError, MissingPrediction, PointError
+from scanfit.contracts import BuildContext, LimitCurve, Observable, Term
+from scanfit.errors import InputError, MissingPrediction, PointError, Problem
 from scanfit.priors import FloatArray
 from scanfit.validation import Options as BaseOptions
 
-from ..candidate import Candidate
-from ..mediator_widths import FERMION_CHANNELS, FERMION_STATES
-from .analysis import read_analysis
-from .signal import SpinOneSignal, load_table
+from ..candidate import Candidate, SpinOneMediator
+from .analysis import read_analysis, read_background
+from .histfactory import HistFactoryLikelihood
+from .limits import confidence, coupling_curve
+from .rates import OwnRates, Rates, ShippedRates
+from .signal import load_table
 from .simplified_likelihood import SimplifiedLikelihood
 
 FB_PER_PB: Final = 1000.0
-NEUTRINO_COUPLING: Final = math.sqrt(float(FERMION_STATES[FERMION_CHANNELS.index("nunu")]))
-"""All neutrinos together, as one Dirac fermion, in units of the lepton coupling."""
+SHOWER_FACTOR: Final = 1.12
+"""Of the parton shower on the leading order: 1.07 to 1.14 with the generator of the tables."""
+
+SPIN_ZERO: Final = (
+    "mono-x production of anything but a spin-one mediator: a spin-zero one comes from gluons through a top loop, "
+    "whose amplitude with a hard jet is not tabulated here, and its heavy-top limit fails where the search looks, "
+    "above the top mass"
+)
+
+
+class Counts(Protocol):
+    """What the term asks of its likelihood, simplified or full."""
+
+    @property
+    def sampled(self) -> bool: ...
+
+    @property
+    def observed(self) -> FloatArray: ...
+
+    def profile(self, signal: FloatArray, log_uncertainty: FloatArray | None = None) -> float: ...
+
+    def marginal(self, signal: FloatArray, log_uncertainty: FloatArray | None = None) -> float: ...
+
+    def central(self) -> tuple[FloatArray, FloatArray]: ...
+
+    def drawn(self, signal: FloatArray, log_uncertainty: FloatArray, rng: np.random.Generator) -> Self: ...
+
+    def asimov(self, signal: FloatArray) -> Self: ...
 
 
 class MonoX(Term[Candidate]):
@@ -40,37 +68,41 @@ class MonoX(Term[Candidate]):
 
         data: str
         """Analysis file, relative to the run file; see `Analysis`."""
-        shower_factor: PositiveFloat = 1.12
-        """Factor on the leading-order signal for the parton shower (1.07 to 1.14 with the generator of the table)."""
+        shower_factor: PositiveFloat | None = None
+        """Factor on the signal; when left out 1.12 for the shipped leading-order tables, and 1 for one's own table."""
         signal_uncertainty: Annotated[float, Field(ge=0.0, le=1.0)] = 0.10
-        """Relative uncertainty of `shower_factor`."""
+        """Relative uncertainty of the signal in all bins together."""
         scale_uncertainty: bool = True
-        """Whether the spread among scale choices adds to it: about 18 % at a mediator mass of 1 TeV."""
+        """Whether the spread among scale choices, or one's own table's uncertainty, adds to it: about 18 % at 1 TeV."""
 
     name: ClassVar[str] = "mono-x"
     summary: ClassVar[str] = "collider search for dark matter recoiling against a jet or photon, in correlated bins"
     cost: ClassVar[float] = 0.2
+    curves: ClassVar[Mapping[str, str]] = {
+        "vector": "quark coupling against mediator mass: vector couplings, g_dark = 1, light dark matter",
+        "axial": "quark coupling against mediator mass: axial couplings, g_dark = 1, light dark matter",
+    }
 
     def __init__(self, options: Options, context: BuildContext) -> None:
         self.options = options
         path = Path(context.folder) / options.data
-        self.analysis, self._background = read_analysis(path)
+        self.analysis = read_analysis(path)
+        self._profiled = context.inner_nuisances == "profile"
         try:
-            table = load_table(self.analysis.signature, self.analysis.sqrt_s)
-            self._spin_one = SpinOneSignal(table, self.analysis.bin_edges)
+            self._likelihood, files = self._read_likelihood(path)
+            self._rates: Rates
+            if self.analysis.signal is None:
+                table = load_table(self.analysis.signature, self.analysis.sqrt_s)
+                self._rates, factor = ShippedRates(table, self.analysis.bin_edges), SHOWER_FACTOR
+            else:
+                self._rates, factor = OwnRates(self.analysis, path.parent), 1.0
         except InputError as error:
             raise InputError(error.problems, error.source or str(path)) from None
+        factor = factor if options.shower_factor is None else options.shower_factor
         efficiency = np.ones(self.analysis.count) if self.analysis.efficiency is None else self.analysis.efficiency
-        self._events_per_pb = options.shower_factor * self.analysis.luminosity * FB_PER_PB * np.asarray(efficiency)
-        self._profiled = context.inner_nuisances == "profile"
-        self._likelihood = SimplifiedLikelihood(self._background, np.array(self.analysis.observed, dtype=float))
-        self.data_files = (path, table.path)
-        self.caveats = (
-            *((f"{self.analysis.title}: invented data",) if self.analysis.invented else ()),
-            *self._near_zero(),
-            f"mono-x signal: leading order times {options.shower_factor:g}, universal quark couplings, no detector "
-            "simulation; simplified likelihood",
-        )
+        self._events_per_pb = factor * self.analysis.luminosity * FB_PER_PB * np.asarray(efficiency)
+        self.data_files = (path, *files, *self._rates.files)
+        self.caveats = self._caveats(factor)
 
     def signal(self, prediction: Candidate) -> tuple[FloatArray, FloatArray]:
         """Return expected signal events per bin and their log uncertainty, each of shape (n_bins,).
@@ -80,34 +112,34 @@ class MonoX(Term[Candidate]):
         MissingPrediction
             If the candidate has no spin-one mediator, or is no fermion.
         PointError
-            If the mediator's width is not positive, or a Majorana particle is given a vector coupling.
+            If the mediator's width is not positive, a Majorana particle is given a vector coupling, or the point lies
+            outside the analysis's range of validity or the user's table, and the analysis says to refuse it.
         """
         mediator = prediction.mediator
         if mediator is None:
             raise MissingPrediction("a spin-one mediator")
+        if not isinstance(mediator, SpinOneMediator):
+            raise MissingPrediction(SPIN_ZERO)
         if prediction.spin_degrees_of_freedom != 2:
             raise MissingPrediction("a spin-one mediator that decays into a fermion")
-        if prediction.self_conjugate and mediator.coupling == "vector":
+        if prediction.self_conjugate and any(
+            current.g_dark != 0.0 and not current.axial for current in mediator.currents
+        ):
             raise PointError("a Majorana particle has no vector coupling")
         if not mediator.width > 0.0:
             raise PointError(f"the mediator's width must be positive (it is {mediator.width:g} GeV)")
-        axial = mediator.coupling == "axial"
-        cross_section, scales = self._spin_one(
-            mediator.mass, mediator.width, axial, prediction.mass, mediator.g_quark, mediator.g_dark
-        )
-        if prediction.self_conjugate:
-            cross_section = 0.5 * cross_section
-        if mediator.g_lepton != 0.0:
-            # Neutrinos are as invisible as dark matter; interference with the Z boson is left out.
-            neutrinos, neutrino_scales = self._spin_one(
-                mediator.mass, mediator.width, axial, 0.0, mediator.g_quark, NEUTRINO_COUPLING * mediator.g_lepton
-            )
-            total = cross_section + neutrinos
-            weighted = cross_section * scales + neutrinos * neutrino_scales
-            scales = np.divide(weighted, total, out=np.zeros_like(total), where=total > 0.0)
-            cross_section = total
-        shower = math.log1p(self.options.signal_uncertainty)
-        uncertainty = np.hypot(shower, scales) if self.options.scale_uncertainty else np.full(len(scales), shower)
+        try:
+            refusal = self.analysis.validity.refusal(mediator.mass, mediator.width, prediction.mass)
+            if refusal:
+                raise PointError(f"{self.analysis.title}: {refusal}")
+            share = 0.5 if prediction.self_conjugate else 1.0
+            cross_section, scales = self._rates(mediator, prediction.mass, share)
+        except PointError:
+            if self.analysis.validity.outside == "refuse":
+                raise
+            return np.zeros(self.analysis.count), np.zeros(self.analysis.count)
+        own = math.log1p(self.options.signal_uncertainty)
+        uncertainty = np.hypot(own, scales) if self.options.scale_uncertainty else np.full(len(scales), own)
         return self._events_per_pb * cross_section, uncertainty
 
     def loglike(self, prediction: Candidate, values: Mapping[str, float]) -> float:
@@ -116,24 +148,29 @@ class MonoX(Term[Candidate]):
             return self._likelihood.profile(signal, uncertainty)
         return self._likelihood.marginal(signal, uncertainty)
 
+    def confidence(self, prediction: Candidate) -> tuple[float, float]:
+        """Observed CLs of the candidate, and the median one without signal; nuisances are profiled."""
+        return confidence(self._likelihood, *self.signal(prediction))
+
     def explain(self, prediction: Candidate, values: Mapping[str, float]) -> Sequence[Observable]:
         signal, uncertainty = self.signal(prediction)
+        above = f" above {self.analysis.edges[0]:g} GeV" if self.analysis.edges and not self.analysis.signal else ""
         rows = [
             Observable(
-                name=f"signal cross section above {self.analysis.edges[0]:g} GeV",
+                name=f"signal cross section{above}",
                 predicted=float(signal.sum()) / self.analysis.luminosity,
                 unit="fb",
                 note=f"{self.analysis.signature}, after selection",
             )
         ]
-        variance = np.diag(self.analysis.covariance_matrix())
-        for index, background in enumerate(self.analysis.background):
+        background, deviation = self._likelihood.central()
+        for index, expected in enumerate(background):
             rows.append(
                 Observable(
                     name=f"events in {self.analysis.bin_name(index)}",
-                    predicted=background + float(signal[index]),
+                    predicted=float(expected + signal[index]),
                     observed=float(self._likelihood.observed[index]),
-                    uncertainty=math.sqrt(variance[index] + background),
+                    uncertainty=math.sqrt(deviation[index] ** 2 + expected),
                     unit="events",
                     note=f"signal {signal[index]:.4g} within {100.0 * math.expm1(uncertainty[index]):.0f} %; "
                     "uncertainty of the background with its Poisson fluctuation",
@@ -143,29 +180,71 @@ class MonoX(Term[Candidate]):
 
     def simulate(self, prediction: Candidate, values: Mapping[str, float], rng: np.random.Generator) -> Self:
         """Return the term with counts drawn at this point; the inner nuisances are drawn from their densities."""
-        signal, uncertainty = self.signal(prediction)
-        theta = self._background.lower @ rng.standard_normal(self._background.count)
-        mean = self._background.expected(theta) + signal * np.exp(uncertainty * rng.standard_normal())
-        return self._with_counts(rng.poisson(mean).astype(float))
+        return self._with_likelihood(self._likelihood.drawn(*self.signal(prediction), rng))
 
     def expected(self, prediction: Candidate, values: Mapping[str, float]) -> Self:
         """Return the term holding the counts expected at this point with every inner nuisance at its centre."""
-        signal, _ = self.signal(prediction)
-        return self._with_counts(self._background.expected(np.zeros(self._background.count)) + signal)
+        return self._with_likelihood(self._likelihood.asimov(self.signal(prediction)[0]))
 
-    def _near_zero(self) -> tuple[str, ...]:
-        """Bins where Laplace's method is coarse, because the background's uncertainty reaches down to zero."""
-        background = self._background
-        lowest = np.minimum(background.expected(-3.0 * np.ones(background.count)), background.constant)
-        bins = [self.analysis.bin_name(int(index)) for index in np.flatnonzero(lowest < 0.01 * background.constant)]
-        if self._profiled or not bins:
-            return ()
-        return (
-            f"mono-x background within three standard deviations of zero ({', '.join(bins)}): its marginalisation is "
-            "approximate; third moments, or profiling, treat it better",
-        )
+    def limit_curve(
+        self,
+        curve: str,
+        *,
+        level: float | None = None,
+        points: int = 40,
+        pseudo_experiments: int = 200,
+        rng: np.random.Generator | None = None,
+    ) -> LimitCurve:
+        """Limits of this search alone, with CLs and the large-sample formulas: no pseudo-data are drawn."""
+        if curve not in self.curves:
+            return super().limit_curve(curve)
+        result = coupling_curve(
+            self._likelihood, self.signal, "axial" if curve == "axial" else "vector",
+            level=0.95 if level is None else level, points=points,
+        )  # fmt: skip
+        if not pseudo_experiments:
+            result["bands"] = None
+        return LimitCurve(title=f"{self.analysis.title}: {self.curves[curve]}", caveats=self.caveats, **result)
 
-    def _with_counts(self, counts: FloatArray) -> Self:
+    def _read_likelihood(self, path: Path) -> tuple[Counts, tuple[Path, ...]]:
+        analysis = self.analysis
+        if analysis.workspace is None:
+            background = read_background(analysis, path)
+            return SimplifiedLikelihood(background, np.array(analysis.observed, dtype=float)), ()
+        if not self._profiled:
+            rule = 'a full likelihood can only be profiled: set `inner_nuisances = "profile"` in [run]'
+            raise InputError([Problem("workspace", rule)])
+        workspace = path.parent / analysis.workspace
+        likelihood = HistFactoryLikelihood(workspace, analysis.channels or (), analysis.measurement)
+        if likelihood.count != analysis.count:
+            rule = f"the channels hold {likelihood.count} bins, this file {analysis.count}"
+            raise InputError([Problem("channels", rule)])
+        return likelihood, (workspace,)
+
+    def _caveats(self, factor: float) -> tuple[str, ...]:
+        analysis, likelihood = self.analysis, self._likelihood
+        found = [f"{analysis.title}: invented data"] if analysis.invented else []
+        kind = "simplified likelihood" if analysis.workspace is None else "full likelihood"
+        if analysis.signal is None:
+            found.append(
+                f"mono-x signal: leading order times {factor:g}, universal quark couplings, no detector simulation; "
+                f"{kind}"
+            )
+        else:
+            found.append(
+                f"mono-x signal: own table {analysis.signal.table} times {factor:g}, brought to other couplings and "
+                f"widths with leading-order rates; {kind}"
+            )
+        if likelihood.sampled and not self._profiled:
+            found.append(
+                "mono-x background within three standard deviations of zero: marginalised by importance sampling, to "
+                "about 0.01 in ln L"
+            )
+        if analysis.validity.outside == "ignore":
+            found.append(f"{analysis.title}: says nothing outside its range of validity")
+        return tuple(found)
+
+    def _with_likelihood(self, likelihood: Counts) -> Self:
         other: Any = copy.copy(self)
-        other._likelihood = SimplifiedLikelihood(self._background, counts)
+        other._likelihood = likelihood
         return other  # type: ignore[no-any-return]

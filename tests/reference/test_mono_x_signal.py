@@ -51,7 +51,13 @@ def test_cross_sections_agree_with_the_independent_computation_to_two_per_cent(p
 
 @pytest.mark.parametrize(
     ("signature", "sqrt_s", "rapidity"),
-    [("mono-jet", 13.0, 2.4), ("mono-jet", 13.6, 2.4), ("mono-jet", 14.0, 2.4), ("mono-photon", 13.0, 2.37)],
+    [
+        ("mono-jet", 13.0, 2.4),
+        ("mono-jet", 13.6, 2.4),
+        ("mono-jet", 14.0, 2.4),
+        ("mono-photon", 13.0, 2.37),
+        ("mono-photon", 14.0, 2.37),
+    ],
 )
 def test_table_agrees_with_sampling_the_parton_formula_in_other_variables(signature, sqrt_s, rapidity):
     """Same physics in (x1, x2, cos theta*) instead of rapidities and pT, by quasi-random sampling."""

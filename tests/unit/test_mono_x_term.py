@@ -10,7 +10,7 @@ import numpy as np
 import pytest
 
 from scanfit.contracts import BuildContext
-from scanfit.errors import MissingPrediction, PointError
+from scanfit.errors import InputError, MissingPrediction, PointError
 from scanfit.likelihoods.candidate import Annihilation, Candidate, CosmologyOptions, SpinOneMediator
 from scanfit.likelihoods.mediator_widths import spin_one_total_width
 from scanfit.likelihoods.mono_x.term import MonoX
@@ -136,11 +136,87 @@ def test_pseudo_data_spread_as_the_covariance_says(term):
     np.testing.assert_allclose(ratio, 1.0, atol=5.0 * math.sqrt(2.0 / 400))
 
 
-def test_backgrounds_near_zero_are_flagged_when_marginalised(tmp_path):
+def loose(tmp_path, inner) -> MonoX:
     text = (DEMO / "brackwater_mono_jet.toml").read_text(encoding="utf-8").replace("0.08, 0.10]", "0.08, 0.40]")
     (tmp_path / "loose.toml").write_text(text, encoding="utf-8")
-    options = MonoX.Options(data="loose.toml")
-    loose = MonoX(options, BuildContext(tmp_path, "marginal"))
-    assert any("above 1200 GeV" in caveat for caveat in loose.caveats)
-    assert not any("1200" in caveat for caveat in MonoX(options, BuildContext(tmp_path, "profile")).caveats)
-    assert not any("zero" in caveat for caveat in build().caveats)
+    return MonoX(MonoX.Options(data="loose.toml"), BuildContext(tmp_path, inner))
+
+
+def test_backgrounds_near_zero_are_sampled_when_marginalised(tmp_path):
+    assert any("importance sampling" in caveat for caveat in loose(tmp_path, "marginal").caveats)
+    assert not any("sampling" in caveat for caveat in loose(tmp_path, "profile").caveats)
+    assert not any("sampling" in caveat for caveat in build().caveats)
+
+
+def with_validity(tmp_path, lines: str) -> MonoX:
+    text = (DEMO / "brackwater_mono_jet.toml").read_text(encoding="utf-8")
+    (tmp_path / "search.toml").write_text(f"{text}\n[validity]\n{lines}\n", encoding="utf-8")
+    return MonoX(MonoX.Options(data="search.toml"), BuildContext(tmp_path, "marginal"))
+
+
+@pytest.mark.parametrize(
+    ("lines", "message"),
+    [
+        ("mediator_mass = [100.0, 1400.0]", "mediator mass of 1500 GeV lies outside its range, 100 to 1400 GeV"),
+        ("dark_mass = [20.0, 1000.0]", "dark-matter mass of 10 GeV lies outside its range, 20 to 1000 GeV"),
+        ("width_ratio_below = 0.01", r"width of 0\.0\d+ of its mass is above the limit of 0\.01"),
+    ],
+)
+def test_points_outside_the_range_of_validity_are_refused_or_left_alone(tmp_path, lines, message, term):
+    refusing = with_validity(tmp_path, lines)
+    with pytest.raises(PointError, match=message):
+        refusing.loglike(candidate(), {})
+    ignoring = with_validity(tmp_path, f'{lines}\noutside = "ignore"')
+    assert ignoring.loglike(candidate(g_quark=3.0), {}) == term.loglike(candidate(g_quark=0.0), {})
+    assert any("says nothing outside" in caveat for caveat in ignoring.caveats)
+    generous = with_validity(tmp_path, "mediator_mass = [100.0, 5000.0]\nwidth_ratio_below = 0.3")
+    assert generous.loglike(candidate(), {}) == term.loglike(candidate(), {})
+
+
+def test_a_spin_zero_mediator_is_refused_with_the_reason(term):
+    @dataclasses.dataclass(frozen=True)
+    class SpinZero:
+        mass: float = 500.0
+
+    with pytest.raises(MissingPrediction, match="top loop, whose amplitude with a hard jet is not tabulated"):
+        term.loglike(dataclasses.replace(candidate(), mediator=SpinZero()), {})
+
+
+def test_mixed_couplings_add_vector_and_axial_rates(term):
+    """Massless quarks: rate ~ (g_V^2 + g_A^2) (Gamma_V + Gamma_A); widths add, since the interference vanishes."""
+    width = 60.0
+
+    def events(**couplings) -> np.ndarray:
+        mediator = SpinOneMediator(1500.0, width, **{"g_lepton": 0.0, **couplings})
+        return term.signal(dataclasses.replace(candidate(mass=300.0), mediator=mediator))[0]
+
+    vector = events(coupling="vector", g_quark=0.2, g_dark=0.8)
+    axial = events(coupling="axial", g_quark=0.2, g_dark=0.5)
+    mixed = events(coupling="vector", g_quark=0.12, g_dark=0.8, other_g_quark=0.16, other_g_dark=0.5)
+    np.testing.assert_allclose(mixed, vector + axial, rtol=1e-12)
+    # A purely right-handed lepton current leaves neutrinos alone; a left-handed one doubles their amplitude.
+    blind = events(coupling="vector", g_quark=0.2, g_dark=0.8, g_lepton=0.1, other_g_lepton=0.1)
+    np.testing.assert_allclose(blind, vector, rtol=1e-12)
+
+
+def test_heavy_mediators_and_left_out_bands_are_marked():
+    """At 4 TeV no coupling up to sqrt(4 pi) is excluded in the invented search: its limit is infinite."""
+    curve = build("profile").limit_curve("vector", points=2, pseudo_experiments=0)
+    assert curve.bands is None
+    assert 0.0 < curve.observed[0] < 0.1
+    assert curve.observed[1] == math.inf
+
+
+def test_limit_on_the_coupling_brackets_what_is_expected():
+    term = build("profile")
+    curve = term.limit_curve("axial", points=3)
+    assert curve.level == 0.95
+    assert np.all(np.diff(curve.bands[:2], axis=1) > 0.0)
+    # The limit is where CLs is 5 %: evaluated again at the limit itself.
+    mass, g_quark = float(curve.x_values[1]), float(curve.observed[1])
+    observed, _ = term.confidence(candidate(mass=1.0, mediator_mass=mass, g_quark=g_quark))
+    assert observed == pytest.approx(0.05, abs=2e-3)
+    _, expected = term.confidence(candidate(mass=1.0, mediator_mass=mass, g_quark=float(curve.bands[1, 2])))
+    assert expected == pytest.approx(0.05, abs=2e-3)
+    with pytest.raises(InputError, match=r"no limit curve of this name.*allowed: vector, axial"):
+        term.limit_curve("scalar")

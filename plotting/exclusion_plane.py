@@ -1,0 +1,118 @@
+"""What one collider search alone excludes in the plane of two masses: figure and table."""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import Final
+
+import numpy as np
+import pandas as pd
+from matplotlib.axes import Axes
+from matplotlib.lines import Line2D
+from matplotlib.patches import Patch
+
+from scanfit.contracts import ExclusionPlane, Quantity
+from scanfit.priors import FloatArray
+
+from .style import COLOURS, figure_style, new_figure, tint
+
+_SMALLEST: Final = 1e-8
+"""CLs below which nothing more is to be seen; keeps the logarithm finite."""
+
+
+def write_exclusion_plane(plane: ExclusionPlane, stem: Path, level: float = 0.95) -> list[Path]:
+    """Write the plane as table and figure.
+
+    Parameters
+    ----------
+    plane : ExclusionPlane
+        What to show.
+    stem : Path
+        Of the files; ``.csv``, ``.png`` and ``.pdf`` are added.
+    level : float
+        Confidence level of the lines that are drawn; the table holds CLs at every point.
+
+    Returns
+    -------
+    list of Path
+        The files.
+    """
+    table = stem.with_name(f"{stem.name}.csv")
+    with table.open("w", encoding="utf-8") as file:
+        file.write("".join(f"# {line}\n" for line in (plane.title, plane.fixed, *plane.caveats)))
+        pd.DataFrame(plane.table()).to_csv(file, index=False)
+    return [table, *draw_exclusion_plane(plane, stem, level)]
+
+
+def draw_exclusion_plane(plane: ExclusionPlane, stem: Path, level: float = 0.95) -> list[Path]:
+    """Draw the observed line (solid, excluded side shaded) and the median expected one (dashed)."""
+    invented = any("invented" in text for text in (plane.title, *plane.caveats))
+    footnote = "Invented data. " if invented else ""
+    footnote += f"Large-sample CLs of this search alone; {plane.fixed}."
+    with figure_style():
+        figure = new_figure(5.2, 4.1, footnote)
+        axes = figure.add_subplot()
+        colour = COLOURS["profile"]
+        observed, expected = (_excess(values, level) for values in (plane.observed, plane.expected))
+        handles: list[Line2D | Patch] = []
+        if _crosses(observed):
+            axes.contourf(plane.x_values, plane.y_values, observed, levels=[0.0, np.inf], colors=[tint(colour, 0.18)])
+            axes.contour(plane.x_values, plane.y_values, observed, levels=[0.0], colors=[colour], linewidths=1.8)
+            handles.append(Line2D([], [], color=colour, linewidth=1.8, label="observed"))
+        if _crosses(expected):
+            axes.contour(plane.x_values, plane.y_values, expected, levels=[0.0], colors=[COLOURS["mark"]],
+                         linestyles=["dashed"], linewidths=1.3)  # fmt: skip
+            handles.append(
+                Line2D([], [], color=COLOURS["mark"], linestyle="--", linewidth=1.3, label="expected, median")
+            )
+        if not handles:
+            axes.text(0.5, 0.5, f"nothing on this plane is excluded at {100 * level:g} %", ha="center",
+                      transform=axes.transAxes)  # fmt: skip
+        if np.isnan(plane.observed).any():
+            axes.contourf(plane.x_values, plane.y_values, np.isnan(plane.observed).astype(float),
+                          levels=[0.5, 1.5], colors="none", hatches=["///"])  # fmt: skip
+            handles.append(Patch(facecolor="none", edgecolor=COLOURS["prior"], hatch="///", label="not covered"))
+        _on_shell_line(axes, plane)
+        axes.set(xlabel=_label(plane.x), ylabel=_label(plane.y), xscale=_scale(plane.x_values),
+                 yscale=_scale(plane.y_values))  # fmt: skip
+        axes.set_xlim(plane.x_values[0], plane.x_values[-1])
+        axes.set_ylim(plane.y_values[0], plane.y_values[-1])
+        axes.set_title(plane.title)
+        if handles:
+            axes.legend(handles=handles, title=f"excluded at {100 * level:g} %", loc="upper left", alignment="left")
+        png, pdf = (stem.with_name(f"{stem.name}.{kind}") for kind in ("png", "pdf"))
+        # Neither date nor version: equal results are equal bytes.
+        figure.savefig(png, metadata={"Software": None})
+        figure.savefig(pdf, metadata={"CreationDate": None, "Creator": None, "Producer": None})
+    return [png, pdf]
+
+
+def _excess(confidence: FloatArray, level: float) -> FloatArray:
+    """Positive where a point is excluded; smooth across the line."""
+    return np.asarray(np.log(1.0 - level) - np.log(np.maximum(confidence, _SMALLEST)))
+
+
+def _crosses(excess: FloatArray) -> bool:
+    return bool(np.nanmin(excess) < 0.0 < np.nanmax(excess)) if not np.isnan(excess).all() else False
+
+
+def _on_shell_line(axes: Axes, plane: ExclusionPlane) -> None:
+    """Where the mediator is just heavy enough for a pair of dark-matter particles."""
+    if (plane.x.name, plane.y.name) != ("mediator_mass", "mass"):
+        return
+    x = np.array([plane.x_values[0], plane.x_values[-1]])
+    axes.plot(x, 0.5 * x, color=COLOURS["prior"], linewidth=0.8, linestyle=":")
+    place = 0.75 * min(float(x[1]), 2.0 * float(plane.y_values[-1]))
+    axes.annotate("$2 m_\\chi = M$", (place, 0.5 * place), xytext=(3, -10), textcoords="offset points", fontsize=8,
+                  color=COLOURS["prior"])  # fmt: skip
+
+
+def _label(quantity: Quantity) -> str:
+    name = quantity.description or quantity.name
+    return f"{name} {quantity.label}"
+
+
+def _scale(values: FloatArray) -> str:
+    """Logarithmic where the values are spaced so."""
+    steps = np.diff(values)
+    return "log" if len(values) > 2 and steps[-1] > 1.5 * steps[0] else "linear"

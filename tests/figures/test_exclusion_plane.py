@@ -1,0 +1,63 @@
+"""The plane that one search alone excludes: what the figure and its table say."""
+
+from __future__ import annotations
+
+import numpy as np
+import pandas as pd
+import pytest
+
+from scanfit.contracts import ExclusionPlane, Quantity
+from scanfit.plotting import exclusion_plane as drawing
+from scanfit.plotting.exclusion_plane import draw_exclusion_plane, write_exclusion_plane
+from scanfit.plotting.style import new_figure
+
+
+def plane(observed: np.ndarray, title="Brackwater ring (invented)") -> ExclusionPlane:
+    return ExclusionPlane(
+        title=title,
+        fixed="vector couplings, g_quark = 0.25",
+        x=Quantity("mediator_mass", "GeV", "M", "mediator mass"),
+        y=Quantity("mass", "GeV", r"m_\chi", "dark-matter mass"),
+        x_values=np.linspace(100.0, 2000.0, 12),
+        y_values=np.linspace(10.0, 900.0, 10),
+        observed=observed,
+        expected=observed**0.8,
+        caveats=("a caveat",),
+    )
+
+
+@pytest.fixture
+def confidence() -> np.ndarray:
+    x, y = np.meshgrid(np.linspace(0.0, 2.0, 12), np.linspace(0.0, 1.0, 10))
+    return np.exp(-8.0 * (1.6 - x - y).clip(0.0))
+
+
+def figures(monkeypatch) -> list:
+    made = []
+    monkeypatch.setattr(drawing, "new_figure", lambda *a, **k: made.append(new_figure(*a, **k)) or made[-1])
+    return made
+
+
+def test_table_and_figure_are_written_and_say_what_they_show(tmp_path, monkeypatch, confidence):
+    made = figures(monkeypatch)
+    paths = write_exclusion_plane(plane(confidence), tmp_path / "plane")
+    assert [path.suffix for path in paths] == [".csv", ".png", ".pdf"]
+    assert all(path.stat().st_size > 0 for path in paths)
+    table = pd.read_csv(paths[0], comment="#")
+    assert list(table.columns) == ["mediator_mass", "mass", "cls_observed", "cls_expected"]
+    np.testing.assert_allclose(table.cls_observed, confidence.ravel())
+    assert "# a caveat" in paths[0].read_text(encoding="utf-8")
+    text = [t.get_text() for t in made[0].texts]
+    assert any(t.startswith("Invented data.") for t in text)
+    legend = made[0].axes[0].get_legend()
+    assert [t.get_text() for t in legend.get_texts()] == ["observed", "expected, median"]
+    assert legend.get_title().get_text() == "excluded at 95 %"
+
+
+def test_a_plane_without_exclusion_says_so_and_gaps_are_hatched(tmp_path, monkeypatch, confidence):
+    made = figures(monkeypatch)
+    draw_exclusion_plane(plane(np.full_like(confidence, 0.5)), tmp_path / "none")
+    assert "nothing on this plane is excluded at 95 %" in [t.get_text() for t in made[0].axes[0].texts]
+    confidence[:, :3] = np.nan
+    draw_exclusion_plane(plane(confidence), tmp_path / "gaps")
+    assert "not covered" in [t.get_text() for t in made[1].axes[0].get_legend().get_texts()]
