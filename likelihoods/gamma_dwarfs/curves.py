@@ -15,7 +15,7 @@ from scanfit.priors import FloatArray
 from .dispersion import EnergyResponse
 from .flux_table import FluxLikelihood
 from .likelihood import DwarfLikelihood
-from .limits import FluxScan, one_sided_fall
+from .limits import FluxScan, calibrated_fall, one_sided_fall, upper_limit
 from .spectra import LINE, TABLE_CHANNELS, TABLE_COLUMN, THRESHOLDS, PhotonTable
 
 CURVES: Final[Mapping[str, str]] = {
@@ -57,6 +57,23 @@ def masses_of(channel: str, points: int, response: EnergyResponse, table: Photon
     return np.geomspace(low, high, points)
 
 
+def _fall(
+    likelihood: DwarfLikelihood | FluxLikelihood,
+    flux: FloatArray,
+    level: float,
+    experiments: int,
+    rng: np.random.Generator,
+) -> float:
+    """The fall at a limit; calibrated, if asked for, at the limit itself and never below the asymptotic one."""
+    fall = one_sided_fall(level)
+    if experiments == 0 or likelihood.inner == "marginal" or not isinstance(likelihood, DwarfLikelihood):
+        return fall
+    at_limit = FluxScan(likelihood, flux).upper_limit(fall)
+    if not math.isfinite(at_limit):
+        return fall
+    return max(fall, calibrated_fall(likelihood, at_limit * flux, level, experiments, rng))
+
+
 def limit_curve(
     likelihood: DwarfLikelihood | FluxLikelihood,
     table: PhotonTable,
@@ -66,11 +83,13 @@ def limit_curve(
     pseudo_experiments: int,
     rng: np.random.Generator | None,
     caveats: tuple[str, ...],
+    calibration: int = 0,
 ) -> LimitCurve:
     """Observed limits, and the bands of background-only pseudo-experiments; see `scanfit.contracts.Term.limit_curve`.
 
-    The same pseudo-experiments serve all masses. Counts fluctuate in them, and so do the measurements of J and of
-    backgrounds. Tables of log-likelihoods have no band.
+    The same pseudo-experiments serve all masses. Counts fluctuate in them, and so do the measurements of backgrounds; J-factors
+    stay as measured, so that the observed limit and the band differ by the telescope's luck alone. Tables of
+    log-likelihoods have no band.
     """
     if curve not in CURVES:
         raise InputError([Problem("curve", "not a final state with photons", curve, tuple(CURVES))])
@@ -80,14 +99,20 @@ def limit_curve(
     response = likelihood.observation.response
     masses = masses_of(curve, points, response, table)
     fluxes = [flux_of(curve, float(mass), _SCALE, response, table) for mass in masses]
-    fall = one_sided_fall(chosen)
-    observed = np.array([_SCALE * FluxScan(likelihood, flux).upper_limit(fall) for flux in fluxes])
+    source = np.random.default_rng(SEED) if rng is None else rng
+    falls = [_fall(likelihood, flux, chosen, calibration, source) for flux in fluxes]
+
+    def limit(data: DwarfLikelihood | FluxLikelihood, number: int) -> float:
+        if data.inner == "marginal":
+            return _SCALE * upper_limit(data, fluxes[number], chosen)
+        return _SCALE * FluxScan(data, fluxes[number]).upper_limit(falls[number])
+
+    observed = np.array([limit(likelihood, number) for number in range(masses.size)])
     bands = None
     if pseudo_experiments > 0 and isinstance(likelihood, DwarfLikelihood):
-        source = np.random.default_rng(SEED) if rng is None else rng
         nothing = np.zeros(response.edges.size - 1)
-        drawn = [likelihood.simulate(nothing, source) for _ in range(pseudo_experiments)]
-        limits = [[_SCALE * FluxScan(data, flux).upper_limit(fall) for data in drawn] for flux in fluxes]
+        drawn = [likelihood.simulate(nothing, source, measure_j_again=False) for _ in range(pseudo_experiments)]
+        limits = [[limit(data, number) for data in drawn] for number in range(masses.size)]
         bands = np.quantile(np.array(limits), QUANTILES, axis=1, method="inverted_cdf").T
     return LimitCurve(
         title=f"{likelihood.observation.title}: annihilation into {curve}",

@@ -17,6 +17,8 @@ from .profiling import LN10
 
 _REACH: Final = 6.5
 _STEP: Final = 0.5
+_DROP: Final = 20.0
+_MOST_STEPS: Final = 400
 _AGREEMENT: Final = 1e-5
 _HALVINGS: Final = 8
 _GOLDEN: Final = 0.5 * (math.sqrt(5.0) - 1.0)
@@ -77,7 +79,15 @@ def table_log_likelihoods(  # type: ignore[no-untyped-def]
     for i in range(result.size):
         step = _STEP * min(minus[i], plus[i])
         first, last = -math.ceil(_REACH * minus[i] / step), math.ceil(_REACH * plus[i] / step)
+        # Where the flux is far too high J must fall further than its error suggests.
         highest, best, total, before = -math.inf, 0.0, 0.0, -1.0
+        for _ in range(_MOST_STEPS):
+            found = _at(first * step, fluxes[i], sizes[i], flux[i], value[i], slope[i], minus[i], plus[i])
+            if found < highest - _DROP or 0.5 * (first * step / minus[i]) ** 2 > _DROP and found < highest:
+                break
+            highest = max(highest, found)
+            first -= 2
+        highest = -math.inf
         for halving in range(_HALVINGS):
             for k in range(first, last + 1):
                 if halving > 0 and k % 2 == 0:

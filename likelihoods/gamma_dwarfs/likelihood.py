@@ -86,18 +86,24 @@ class DwarfLikelihood:
         return float(self.signal(flux_per_j).sum())
 
     def simulate(
-        self, flux_per_j: FloatArray, rng: np.random.Generator, values: Mapping[str, float] = NOTHING_SHARED
+        self,
+        flux_per_j: FloatArray,
+        rng: np.random.Generator,
+        values: Mapping[str, float] = NOTHING_SHARED,
+        *,
+        measure_j_again: bool = True,
     ) -> DwarfLikelihood:
         """Pseudo-data of this flux.
 
         The true J-factors and backgrounds are the file's central values. Counts fluctuate, and so do the
         measurements of J, of background levels and of shared nuisances, as if the whole campaign were repeated.
+        Without `measure_j_again` the measured J-factors stay, as if only the telescope looked again.
         """
         data = self.observation
         observed = rng.poisson(self.background(values) + self.signal(flux_per_j, values)).astype(float)
         centre = 1.0 + data.background_error * rng.standard_normal(data.background_error.shape)
         # y = true - measured has the density of j_factor.
-        log10_j = data.log10_j - j_factor.draw(data.j_minus, data.j_plus, rng)
+        log10_j = data.log10_j - j_factor.draw(data.j_minus, data.j_plus, rng) if measure_j_again else data.log10_j
         shared = tuple(
             dataclasses.replace(
                 one, centre=values.get(one.name, one.centre) + one.error * float(rng.standard_normal())

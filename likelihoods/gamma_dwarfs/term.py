@@ -9,6 +9,7 @@ from pathlib import Path
 from typing import Final, Self
 
 import numpy as np
+from pydantic import Field
 
 from scanfit.contracts import BuildContext, InnerNuisances, LimitCurve, Observable, Term
 from scanfit.priors import FloatArray
@@ -24,10 +25,12 @@ from .spectra import LINE, TABLE_CHANNELS, TABLE_COLUMN, PhotonTable, photon_tab
 from .telescope import read_observation
 
 _BADLY_KNOWN: Final = 0.25
-_COVERAGE: Final = (
-    "J-factors with errors up to {:g} dex are profiled: one-sided 95 % limits then exclude a true signal in 7 to 13 % "
-    "of pseudo-experiments instead of 5 %"
-)
+_COVERAGE: Final = {
+    "profile": "J-factors with errors up to {:g} dex are profiled: if their measurements were repeated, limits meant for "
+    "95 % would exclude a true signal in 7 to 13 % of cases; if true values scatter about the measured, in at most 5 %",
+    "marginal": "J-factors with errors up to {:g} dex are integrated out: 95 % limits exclude a true signal in 0 to 8 % of "
+    "cases if measurements were repeated, in at most 5 % if true values scatter about the measured",
+}
 
 
 class GammaDwarfsOptions(Options):
@@ -36,6 +39,8 @@ class GammaDwarfsOptions(Options):
     data: str
     """A TOML file; relative paths start at the run file. Telescope, targets and counts (see `telescope`), or targets and
     a table of log-likelihoods against flux (see `flux_table`)."""
+    calibration: int = Field(default=0, ge=0)
+    """Pseudo-experiments per mass with which `limit_curve` calibrates profiled limits; 0 for asymptotic ones."""
 
 
 class GammaDwarfs(Term[Candidate]):
@@ -64,6 +69,7 @@ class GammaDwarfs(Term[Candidate]):
         observation = self.likelihood.observation
         table = (path.parent / read_toml(path)["flux_table"]["file"],) if self._tabulated else ()
         self.data_files = (path, *table)
+        self._calibration = options.calibration
         self.nuisances = tuple(nuisance.parameter for nuisance in observation.shared)
         self._table: PhotonTable = photon_table()
         j_error = max(float(observation.j_minus.max()), float(observation.j_plus.max()))
@@ -71,7 +77,7 @@ class GammaDwarfs(Term[Candidate]):
         self.caveats = (
             *((f"{observation.title}: invented demo data, not a measurement",) if observation.invented else ()),
             "photon spectra contain no electroweak shower: too soft for masses above about 1 TeV, for leptons most",
-            *((_COVERAGE.format(j_error),) if badly_known else ()),
+            *((_COVERAGE[context.inner_nuisances].format(j_error),) if badly_known else ()),
             "points with masses outside 3 GeV to 100 TeV fail: photon spectra are not extrapolated",
         )
 
@@ -117,7 +123,8 @@ class GammaDwarfs(Term[Candidate]):
         limit = upper_limit(self.likelihood, flux) * effective
         gain = 2.0 * (self.likelihood.total(flux, values) - self.likelihood.total(np.zeros_like(flux), values))
         removed = "profiled" if self.likelihood.inner == "profile" else "integrated out"
-        note = f"95 % CL for this mass and these final states, J-factors {removed}"
+        kind = "CL" if self.likelihood.inner == "profile" else "credibility, prior flat in the cross section,"
+        note = f"95 % {kind} for this mass and these final states, J-factors {removed}"
         excess = self.target_excesses(prediction)[0]
         return (
             Observable(
@@ -174,8 +181,9 @@ class GammaDwarfs(Term[Candidate]):
     ) -> LimitCurve:
         """Limits on sigma v into one final state; see `curves`. Shared nuisances are profiled."""
         return limit_curve(
-            self.likelihood, self._table, curve, level, points, pseudo_experiments, rng, self.caveats
-        )
+            self.likelihood, self._table, curve, level, points, pseudo_experiments, rng, self.caveats,
+            self._calibration,
+        )  # fmt: skip
 
     def simulate(self, prediction: Candidate, values: Mapping[str, float], rng: np.random.Generator) -> Self:
         """The same term with pseudo-data; see `DwarfLikelihood.simulate` for what fluctuates.
