@@ -32,9 +32,7 @@ _ABOVE_BINS: Final = 20.0
 """Masses reach this many times the highest energy: showers make photons far below the mass."""
 
 
-def flux_of(
-    channel: str, mass: float, sigma_v: float, response: EnergyResponse, table: PhotonTable
-) -> FloatArray:
+def flux_of(channel: str, mass: float, sigma_v: float, response: EnergyResponse, table: PhotonTable) -> FloatArray:
     """Photons per cm^2, s and GeV^2 cm^-5 of one final state of a self-conjugate candidate, shape (n_bins,)."""
     weights, line_weight = np.zeros(len(TABLE_CHANNELS)), 0.0
     if channel == LINE:
@@ -87,8 +85,8 @@ def limit_curve(
 ) -> LimitCurve:
     """Observed limits, and the bands of background-only pseudo-experiments; see `scanfit.contracts.Term.limit_curve`.
 
-    The same pseudo-experiments serve all masses. Counts fluctuate in them, and so do the measurements of backgrounds; J-factors
-    stay as measured, so that the observed limit and the band differ by the telescope's luck alone. Tables of
+    The same pseudo-experiments serve all masses. Counts fluctuate in them, and so do the measurements of backgrounds;
+    J-factors stay as measured, so that the observed limit and the band differ by the telescope's luck alone. Tables of
     log-likelihoods have no band.
     """
     if curve not in CURVES:

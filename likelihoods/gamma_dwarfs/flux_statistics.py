@@ -1,8 +1,8 @@
 """Log-likelihoods of targets from tables against flux, with J-factors profiled or integrated out.
 
-The tables may have any shape, so nothing is assumed: log10 J runs over a grid that covers 6.5 standard deviations, 26 steps
-of half the smaller error to begin with, and is halved until the integral changes by less than 1e-5. The maximum is found on
-the finest grid and refined by golden section between its neighbours.
+The tables may have any shape, so nothing is assumed: log10 J runs over a grid that covers 6.5 standard deviations, 26
+steps of half the smaller error to begin with, and is halved until the integral changes by less than 1e-5. The maximum
+is found on the finest grid and refined by golden section between its neighbours.
 """
 
 from __future__ import annotations
@@ -83,7 +83,7 @@ def table_log_likelihoods(  # type: ignore[no-untyped-def]
         highest, best, total, before = -math.inf, 0.0, 0.0, -1.0
         for _ in range(_MOST_STEPS):
             found = _at(first * step, fluxes[i], sizes[i], flux[i], value[i], slope[i], minus[i], plus[i])
-            if found < highest - _DROP or 0.5 * (first * step / minus[i]) ** 2 > _DROP and found < highest:
+            if found < highest - _DROP or (0.5 * (first * step / minus[i]) ** 2 > _DROP and found < highest):
                 break
             highest = max(highest, found)
             first -= 2

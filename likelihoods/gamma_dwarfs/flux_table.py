@@ -1,7 +1,7 @@
 """Likelihood from published tables: profiled log-likelihood against flux, per target and energy bin.
 
-Collaborations publish dwarf results in this form: counts, exposures and backgrounds are folded in already. The data file
-is TOML, as in `telescope`, with a table ``flux_table`` in place of ``energy`` and ``telescope``::
+Collaborations publish dwarf results in this form: counts, exposures and backgrounds are folded in already. The data
+file is TOML, as in `telescope`, with a table ``flux_table`` in place of ``energy`` and ``telescope``::
 
     title = "..."
     invented = true                   # optional
@@ -20,14 +20,14 @@ The CSV file has one header line and five columns, in any order of rows::
 
     target,energy_low,energy_high,flux,log_likelihood
 
-energy_low and energy_high are the edges of an energy bin in GeV; flux is the flux of the target in that bin, in photons per
-cm^2 and s or in GeV per cm^2 and s, at least zero; log_likelihood is the natural logarithm of the likelihood with the
-background profiled, up to a constant per target and bin. All targets have the same bins, which join without gaps; each
-target and bin has at least four fluxes.
+energy_low and energy_high are the edges of an energy bin in GeV; flux is the flux of the target in that bin, in photons
+per cm^2 and s or in GeV per cm^2 and s, at least zero; log_likelihood is the natural logarithm of the likelihood with
+the background profiled, up to a constant per target and bin. All targets have the same bins, which join without gaps;
+each target and bin has at least four fluxes.
 
-Between its points the log-likelihood is a monotone-preserving cubic in the flux; outside them it goes on along the tangent at the
-end, which is too high, never too low, where the true one is concave: limits from there are too weak rather than
-too strong. Pseudo-data cannot be drawn from such a table, so there is no expected band.
+Between its points the log-likelihood is a monotone-preserving cubic in the flux; outside them it goes on along the
+tangent at the end, which is too high, never too low, where the true one is concave: limits from there are too weak
+rather than too strong. Pseudo-data cannot be drawn from such a table, so there is no expected band.
 """
 
 from __future__ import annotations
@@ -35,6 +35,7 @@ from __future__ import annotations
 import csv
 from collections.abc import Mapping
 from dataclasses import dataclass
+from itertools import pairwise
 from pathlib import Path
 from typing import Literal, NoReturn
 
@@ -220,7 +221,9 @@ def _columns(path: Path, names: tuple[str, ...]) -> _Columns:
         reason = getattr(error, "strerror", None) or "it is not UTF-8 text"
         raise InputError([Problem("flux_table.file", f"the file cannot be read: {reason}", str(path))]) from None
     if not rows or tuple(rows[0]) != COLUMNS:
-        raise InputError([Problem("line 1", f"must be '{','.join(COLUMNS)}'", ",".join(rows[0] if rows else []))], str(path))
+        raise InputError(
+            [Problem("line 1", f"must be '{','.join(COLUMNS)}'", ",".join(rows[0] if rows else []))], str(path)
+        )
     problems, columns = [], _Columns()
     for number, row in enumerate(rows[1:], start=2):
         try:
@@ -253,9 +256,11 @@ def _columns(path: Path, names: tuple[str, ...]) -> _Columns:
 
 def _edges(path: Path, columns: _Columns) -> FloatArray:
     bins = sorted({(low, high) for _, low, high in columns})
-    for (_, high), (low, _) in zip(bins[:-1], bins[1:], strict=True):
+    for (_, high), (low, _) in pairwise(bins):
         if high != low:
-            raise InputError([Problem("energy bins", f"must join: one ends at {high:g} GeV, the next starts at", low)], str(path))
+            raise InputError(
+                [Problem("energy bins", f"must join: one ends at {high:g} GeV, the next starts at", low)], str(path)
+            )
     return np.array([low for low, _ in bins] + [bins[-1][1]])
 
 

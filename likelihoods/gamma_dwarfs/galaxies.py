@@ -72,7 +72,9 @@ class SharedNuisance:
 
     def background_factor(self, value: float) -> FloatArray:
         """Factor on the background of each target."""
-        return np.where(self.response > 0.0, value, 1.0) if self.acts_on == "background" else np.ones_like(self.response)
+        return (
+            np.where(self.response > 0.0, value, 1.0) if self.acts_on == "background" else np.ones_like(self.response)
+        )
 
 
 def shared_shift(name: str | None, galaxies: Sequence[GalaxyOptions]) -> tuple[SharedNuisance, ...]:
@@ -103,7 +105,8 @@ def target_problems(j_systematic: str | None, galaxies: Sequence[GalaxyOptions])
     """Problems of the targets that need more than one field to see."""
     problems = [] if galaxies else [Problem("targets", "there must be at least one target")]
     problems += [
-        Problem("targets", "two targets have this name", name) for name in repeated([galaxy.name for galaxy in galaxies])
+        Problem("targets", "two targets have this name", name)
+        for name in repeated([galaxy.name for galaxy in galaxies])
     ]
     shifted = [number for number, galaxy in enumerate(galaxies) if galaxy.log10_j_shift != 0.0]
     if j_systematic is None:

@@ -22,6 +22,7 @@ from .telescope import Observation
 
 NOTHING_SHARED: Mapping[str, float] = {}
 
+
 @dataclass(frozen=True)
 class DwarfLikelihood:
     """Joint likelihood of all targets.
@@ -105,14 +106,10 @@ class DwarfLikelihood:
         # y = true - measured has the density of j_factor.
         log10_j = data.log10_j - j_factor.draw(data.j_minus, data.j_plus, rng) if measure_j_again else data.log10_j
         shared = tuple(
-            dataclasses.replace(
-                one, centre=values.get(one.name, one.centre) + one.error * float(rng.standard_normal())
-            )
+            dataclasses.replace(one, centre=values.get(one.name, one.centre) + one.error * float(rng.standard_normal()))
             for one in data.shared
         )
-        changed = dataclasses.replace(
-            data, observed=observed, background_centre=centre, log10_j=log10_j, shared=shared
-        )
+        changed = dataclasses.replace(data, observed=observed, background_centre=centre, log10_j=log10_j, shared=shared)
         return DwarfLikelihood(changed, self.inner)
 
     def expected(self, flux_per_j: FloatArray, values: Mapping[str, float] = NOTHING_SHARED) -> DwarfLikelihood:
@@ -140,4 +137,4 @@ class DwarfLikelihood:
             level = -log_ndtr(data.background_centre / error)
         else:
             level = -0.5 * math.log(2.0 * math.pi) - np.log(error)
-        return constants + np.where(known, 0.0, level)
+        return np.asarray(constants + np.where(known, 0.0, level))

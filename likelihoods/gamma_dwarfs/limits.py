@@ -6,14 +6,21 @@ Two kinds of limit, after the treatment of J-factors:
   quantile, 1.353 at 95 %;
 * *marginal*: the credible limit, below which 95 % of the posterior lie when the prior is flat in the flux.
 
-What they are worth was measured with 1,000 pseudo-experiments per entry: five targets, 18, 90 and 480 signal photons on
-4,400 of background. Fractions in per cent that exclude the truth, for J-factors known to 0.05, 0.25, 0.4, 0.6 dex:
+What they are worth was measured with 1,000 pseudo-experiments per entry (errors up to 0.9): five targets, 18, 90 and
+480 signal photons on 4,400 of background. Percentages that exclude the truth, J known to 0.05, 0.25, 0.4, 0.6 dex:
 
-PLACEHOLDER
+    limit, photons     measurements repeated      J scattered
+    profile,   18      0.4   1.4   3.5   5.4      0.1   0.3   0.0   0.0
+    profile,   90      4.6   7.3   7.5   9.4      6.3   2.8   2.1   0.6
+    profile,  480      6.5   5.6   6.4   8.2      5.3   3.0   1.6   1.5
+    marginal,  18      0.0   0.1   0.5   0.6      0.0   0.0   0.0   0.0
+    marginal,  90      3.6   5.5   5.3   4.7      5.0   1.3   0.9   0.1
+    marginal, 480      6.1   4.8   4.9   4.0      5.2   3.0   1.4   1.2
 
-"Measurements repeated" holds the true J-factors and lets the measured ones fluctuate; "J scattered" holds the measured ones and
-draws true ones from their errors. Profile limits are safe in the second sense only: measured values scatter evenly in log
-J, so their mean exceeds the true J, and weak targets cannot tell. `calibrated_fall` finds the fall that covers.
+"Measurements repeated" holds the true J-factors and lets the measured ones fluctuate; "J scattered" holds the measured
+ones and draws true ones from their errors. Marginal limits cover in both senses. Profile limits are safe in the second
+only: measured values scatter evenly in log J, so their mean exceeds the true J, and weak targets cannot tell.
+`calibrated_fall` finds the fall that covers. Checks: tests/statistics/test_gamma_coverage.py.
 """
 
 from __future__ import annotations
@@ -175,7 +182,8 @@ class FluxScan:
         fine = np.geomspace(low, high, 40 * _NODES)
         density = np.exp(CubicSpline(np.log(factors), values)(np.log(fine)) - values.max())
         # Below the first node the likelihood is constant, or nothing is left.
-        below = np.concatenate([[0.0], np.cumsum(0.5 * (density[1:] + density[:-1]) * np.diff(fine))]) + low * density[0]
+        pieces = 0.5 * (density[1:] + density[:-1]) * np.diff(fine)
+        below = low * density[0] + np.concatenate([[0.0], np.cumsum(pieces)])
         return float(np.interp(level * below[-1], below, fine))
 
 

@@ -9,12 +9,12 @@ follow without a search. Each node of y starts from the tangent at its neighbour
 
 *J-factor.* The trapezoidal rule on the whole line converges faster than any power for smooth integrands (SIAM Rev. 56
 (2014) 385). Steps are 1.2 times the smaller error of log10 J and are halved until two sums agree to 2e-4, which leaves
-an error of about the square of that. The kink of an asymmetric error lies on a node; the first Euler-Maclaurin term takes
-care of it.
+an error of about the square of that. The kink of an asymmetric error lies on a node; the first Euler-Maclaurin term
+takes care of it.
 
-*Honesty.* The likelihood is concave in A = 10^y with nu integrated out, so tangents at two nodes bound it between them. If
-that bound leaves room for a peak between nodes, if the sums do not agree or the peak is narrower than the step, or if the
-next order of Laplace is not small, the answer is NaN and `marginal_careful` takes over.
+*Honesty.* The likelihood is concave in A = 10^y with nu integrated out, so tangents at two nodes bound it between them.
+If that bound leaves room for a peak between nodes, if the sums do not agree or the peak is narrower than the step, or if
+the next order of Laplace is not small, the answer is NaN and `marginal_careful` takes over.
 """
 
 from __future__ import annotations
@@ -176,7 +176,7 @@ def quick_integral(target, work):  # type: ignore[no-untyped-def]
             finer_scales[2 * k + 1], finer_values[2 * k + 1] = node[5], node[2]
         scales, values, sum_before, step, before = finer_scales, finer_values, total, 0.5 * step, integral
         integral = step * total + step**4 * kink
-        peak = min(max(np.argmax(values), 1), values.size - 2)
+        peak = min(max(int(np.argmax(values)), 1), values.size - 2)
         resolved = 2.0 * values[peak] - values[peak - 1] - values[peak + 1] < _SHARPEST
         if resolved and abs(integral - before) < _AGREEMENT * integral:
             return highest + math.log(integral)

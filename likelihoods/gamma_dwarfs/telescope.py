@@ -34,10 +34,10 @@ A TOML file with these keys; "per bin" means one number for all energy bins or a
     name = "diffuse"
     error = 0.04                      # relative, at most 0.5
 
-A shared background level (mean 1) and the shared systematic of J (standard normal) are nuisance parameters of the scan, under
-the names given here: terms that use the same name share them. A target with a velocity dispersion s annihilates at the
-relative velocity sqrt(6) s instead of at `candidate.DWARF_VELOCITY`, which is the root mean square of a Maxwellian
-and therefore exact for s-wave and p-wave annihilation; near a narrow resonance it is an approximation.
+A shared background level (mean 1) and the shared systematic of J (standard normal) are nuisance parameters of the scan,
+under the names given here: terms that use the same name share them. A target with a velocity dispersion s annihilates
+at the relative velocity sqrt(6) s instead of at `candidate.DWARF_VELOCITY`, which is the root mean square of a
+Maxwellian and therefore exact for s-wave and p-wave annihilation; near a narrow resonance it is an approximation.
 
 Exposure and containment apply to the bin in which a photon is seen. Bins must have some background: without it
 a single stray photon would exclude everything.
@@ -68,7 +68,6 @@ from .galaxies import (
     target_problems,
     velocities,
 )
-
 
 PerBin = Annotated[tuple[PositiveFloat, ...], BeforeValidator(as_array), Field(min_length=1)]
 Fractions = Annotated[

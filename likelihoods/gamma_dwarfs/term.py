@@ -25,20 +25,18 @@ from .spectra import LINE, TABLE_CHANNELS, TABLE_COLUMN, PhotonTable, photon_tab
 from .telescope import read_observation
 
 _BADLY_KNOWN: Final = 0.25
-_COVERAGE: Final = {
-    "profile": "J-factors with errors up to {:g} dex are profiled: if their measurements were repeated, limits meant for "
-    "95 % would exclude a true signal in 7 to 13 % of cases; if true values scatter about the measured, in at most 5 %",
-    "marginal": "J-factors with errors up to {:g} dex are integrated out: 95 % limits exclude a true signal in 0 to 8 % of "
-    "cases if measurements were repeated, in at most 5 % if true values scatter about the measured",
-}
+_COVERAGE: Final = (
+    "J-factors with errors up to {:g} dex are profiled: limits meant for 95 % exclude a true signal in up to 9 % of "
+    "pseudo-experiments if J is measured again in each (inner_nuisances = 'marginal' does not)"
+)
 
 
 class GammaDwarfsOptions(Options):
     """Keys of a ``gamma-dwarfs`` table in the run file."""
 
     data: str
-    """A TOML file; relative paths start at the run file. Telescope, targets and counts (see `telescope`), or targets and
-    a table of log-likelihoods against flux (see `flux_table`)."""
+    """A TOML file; relative paths start at the run file. Telescope, targets and counts (see `telescope`), or targets
+    and a table of log-likelihoods against flux (see `flux_table`)."""
     calibration: int = Field(default=0, ge=0)
     """Pseudo-experiments per mass with which `limit_curve` calibrates profiled limits; 0 for asymptotic ones."""
 
@@ -73,11 +71,11 @@ class GammaDwarfs(Term[Candidate]):
         self.nuisances = tuple(nuisance.parameter for nuisance in observation.shared)
         self._table: PhotonTable = photon_table()
         j_error = max(float(observation.j_minus.max()), float(observation.j_plus.max()))
-        badly_known = j_error > _BADLY_KNOWN
+        badly_known = context.inner_nuisances == "profile" and j_error > _BADLY_KNOWN
         self.caveats = (
             *((f"{observation.title}: invented demo data, not a measurement",) if observation.invented else ()),
             "photon spectra contain no electroweak shower: too soft for masses above about 1 TeV, for leptons most",
-            *((_COVERAGE[context.inner_nuisances].format(j_error),) if badly_known else ()),
+            *((_COVERAGE.format(j_error),) if badly_known else ()),
             "points with masses outside 3 GeV to 100 TeV fail: photon spectra are not extrapolated",
         )
 
@@ -98,8 +96,8 @@ class GammaDwarfs(Term[Candidate]):
     def flux_per_j(self, candidate: Candidate) -> FloatArray:
         """Photons per cm^2, s and GeV^2 cm^-5 in each energy bin, shape (n_bins,).
 
-        Where the file gives targets velocities, shape (n_targets, n_bins). With a table of energy fluxes, GeV instead of
-        photons.
+        Where the file gives targets velocities, shape (n_targets, n_bins). With a table of energy fluxes, GeV instead
+        of photons.
         """
         response, velocity = self.likelihood.observation.response, self.likelihood.observation.velocity
         factor = annihilation_factor(candidate)

@@ -13,8 +13,8 @@ the mass: from there on counts are smoothed over neighbouring masses and energie
 what remains. Final states with a Higgs boson are left as counted: its decay into two photons makes edges. Masses kept
 out for checking are never smoothed and take no part.
 
-``particle_spectra.npz`` holds positrons, antiprotons (by kinetic energy) and three neutrinos (with antineutrinos) in bins twice as
-wide, as counted. Nothing reads it yet.
+``particle_spectra.npz`` holds positrons, antiprotons (by kinetic energy) and three neutrinos (with antineutrinos) in
+bins twice as wide, as counted. Nothing reads it yet.
 
 Limits of the tables, repeated in their metadata:
 
@@ -137,7 +137,9 @@ def main() -> None:
         photons |= arrays
         others |= particle_arrays(sums, channel)
         rows = (sums["channel"] == channel) & ~sums["held_out"]
-        numbers[channel] = {f"{mass:g}": int(n) for mass, n in zip(sums["mass"][rows], sums["events"][rows], strict=True)}
+        numbers[channel] = {
+            f"{mass:g}": int(n) for mass, n in zip(sums["mass"][rows], sums["events"][rows], strict=True)
+        }
         print(f"{channel}: stiffness along mass and energy {stiffness[channel]}", flush=True)
     out = sums["held_out"]
     events = sums["events"][out].astype(float)[:, None]

@@ -1,9 +1,9 @@
 """Smooth counts over a grid of masses and energies where single bins hold too few events.
 
-The logarithm of the expected counts is taken to vary slowly: second differences along the masses and third differences along
-log energy are normal with variances that the counts themselves choose, by the marginal likelihood in Laplace's
-approximation (the method of penalised likelihoods, Stat. Sci. 11 (1996) 89). Masses count by their place in the grid, which
-is dense where spectra change fast.
+The logarithm of the expected counts is taken to vary slowly: second differences along the masses and third differences
+along log energy are normal with variances that the counts themselves choose, by the marginal likelihood in Laplace's
+approximation (the method of penalised likelihoods, Stat. Sci. 11 (1996) 89). Masses count by their place in the grid,
+which is dense where spectra change fast.
 """
 
 from __future__ import annotations
@@ -43,9 +43,7 @@ def smooth(counts: Array, events: Array) -> tuple[Array, Array, tuple[float, flo
     stiffness : tuple of float
         Inverse variances of the differences along mass and energy that were chosen.
     """
-    found = [
-        (*_fit(counts, events, pair), pair) for pair in itertools.product(STIFFNESS_OF_MASS, STIFFNESS_OF_ENERGY)
-    ]
+    found = [(*_fit(counts, events, pair), pair) for pair in itertools.product(STIFFNESS_OF_MASS, STIFFNESS_OF_ENERGY)]
     _, log_rate, covariance, pair = max(found, key=lambda fit: fit[0])
     rate = np.exp(log_rate)
     size = counts.shape[1]

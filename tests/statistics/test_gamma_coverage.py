@@ -1,7 +1,8 @@
 """Coverage of dwarf limits, injection and recovery, and an excess that is fitted.
 
-Five targets, 4,400 photons of background, 24 bins. Counts fluctuate; *measurements repeated* means that true J-factors are held
-and the measured ones fluctuate, *J scattered* that measured ones are held and true ones are drawn from their errors.
+Five targets, 4,400 photons of background, 24 bins. Counts fluctuate; *measurements repeated* means that true J-factors
+are held and the measured ones fluctuate, *J scattered* that measured ones are held and true ones are drawn from their
+errors.
 """
 
 import dataclasses

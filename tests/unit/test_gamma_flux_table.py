@@ -88,8 +88,8 @@ def test_a_table_is_worth_the_counts_behind_it(tmp_path, inner, kind):
             flux = other.flux_per_j(found)
         gain = term.loglike(found, {}) - term.loglike(nothing, {})
         expected = reference.total(flux) - reference.total(0.0 * flux)
-        # Fifty points a bin leave 2e-3 of interpolation. With energy fluxes, a photon's energy stands for its bin's middle, which costs a few
-        # per cent of the flux.
+        # Fifty points a bin leave 2e-3 of interpolation. In the table of energy fluxes the middle of the bin stands for
+        # a photon's energy, which costs a few per cent of the flux.
         tolerance = 5e-3 if kind == "photons" else 0.05
         assert gain == pytest.approx(expected, abs=tolerance * max(1.0, abs(expected)))
 

@@ -91,7 +91,9 @@ def test_shared_nuisances_act_on_their_targets_alone(path, inner):
     assert shifted == pytest.approx(DwarfLikelihood(by_hand, inner).by_target(flux), abs=1e-12)
     unchanged = DwarfLikelihood(data, inner).by_target(flux)
     assert np.all(np.abs(shifted - unchanged) > 1e-3)
-    assert DwarfLikelihood(data, inner).by_target(flux, {"profile_shape": 0.0, "diffuse": 1.0}) == pytest.approx(unchanged)
+    assert DwarfLikelihood(data, inner).by_target(flux, {"profile_shape": 0.0, "diffuse": 1.0}) == pytest.approx(
+        unchanged
+    )
 
 
 @pytest.mark.parametrize("strength", [0.0, 1.0, 10.0])
