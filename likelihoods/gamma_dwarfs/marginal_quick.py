@@ -12,9 +12,9 @@ follow without a search. Each node of y starts from the tangent at its neighbour
 an error of about the square of that. The kink of an asymmetric error lies on a node; the first Euler-Maclaurin term
 takes care of it.
 
-*Honesty.* The likelihood is concave in A = 10^y with nu integrated out, so tangents at two nodes bound it between them.
-If that bound leaves room for a peak between nodes, if the sums do not agree or the peak is narrower than the step, or if
-the next order of Laplace is not small, the answer is NaN and `marginal_careful` takes over.
+*Honesty.* The likelihood is concave in A = 10^y with nu integrated out, so tangents at two nodes bound it between
+them. If that bound leaves room for a peak between nodes, if the sums do not agree or the peak is narrower than the
+step, or if the next order of Laplace is not small, the answer is NaN and `marginal_careful` takes over.
 """
 
 from __future__ import annotations

@@ -1,9 +1,9 @@
 """One target: its likelihood, and every maximum of it in log10 J with the background level profiled.
 
 The Poisson part is concave in (nu, A = 10^y) together, so it stays concave in A once nu is profiled. Let A* maximise
-it. Where A* <= 1 the maximum over y lies between log10 A* and 0, where the sum is concave: one safeguarded Newton search is
-exact. Where A* > 1, data and measured J pull apart and there may be several maxima: the slope is scanned on a grid up
-to where the penalty exceeds anything the data could gain, and every maximum is polished.
+it. Where A* <= 1 the maximum over y lies between log10 A* and 0, where the sum is concave: one safeguarded Newton
+search is exact. Where A* > 1, data and measured J pull apart and there may be several maxima: the slope is scanned on
+a grid up to where the penalty exceeds anything the data could gain, and every maximum is polished.
 """
 
 from __future__ import annotations

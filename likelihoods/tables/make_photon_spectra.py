@@ -10,8 +10,8 @@ Several files of sums, made with different seeds, are added; those that say ``ph
 ``photon_spectra.npz`` holds, for each final state and mass, photons per annihilation in bins of log10 x, x = E/m, the
 standard error of each bin and that of N(> x), the number above its lower edge. Few photons carry more than a tenth of
 the mass: from there on counts are smoothed over neighbouring masses and energies (``smoothing.py``), and errors say
-what remains. Final states with a Higgs boson are left as counted: its decay into two photons makes edges. Masses kept
-out for checking are never smoothed and take no part.
+what remains. Final states with a Higgs boson are left as counted up to a tenth above threshold: its decay into two
+photons makes edges there. Masses kept out for checking are never smoothed and take no part.
 
 ``particle_spectra.npz`` holds positrons, antiprotons (by kinetic energy) and three neutrinos (with antineutrinos) in
 bins twice as wide, as counted. Nothing reads it yet.
@@ -38,7 +38,9 @@ from scanfit.likelihoods.tables.smoothing import smooth
 
 LOG10_X_EDGES: Final = np.round(np.linspace(-6.0, 0.0, 151), 10)
 OTHER_SPECIES: Final = ("positrons", "antiprotons", "electron_neutrinos", "muon_neutrinos", "tau_neutrinos")
-AS_COUNTED: Final = ("hh", "Zh")
+LINES_NEAR_THRESHOLD: Final = ("hh", "Zh")
+SMOOTHED_FROM: Final = 1.1
+"""Relative to the lowest mass: below, photons of h -> gamma gamma make edges that must not be smoothed away."""
 SMOOTHED_ABOVE: Final = 0.1
 FITTED_ABOVE: Final = 0.06
 """Counts between these two take part in smoothing, so that it has no edge where it begins to be used."""
@@ -83,18 +85,21 @@ def photon_arrays(sums: dict[str, np.ndarray], channel: str) -> tuple[dict[str, 
     photons, error = total / events, standard_errors(total, sums["squares"][rows][:, 0], events)
     variance = (error**2)[:, ::-1].cumsum(axis=1)[:, ::-1]
     stiffness: list[float] = []
-    if channel not in AS_COUNTED:
+    mass = sums["mass"][rows]
+    smoothed_rows = mass > (SMOOTHED_FROM * mass[0] if channel in LINES_NEAR_THRESHOLD else 0.0)
+    if smoothed_rows.any():
         lower = 10.0 ** LOG10_X_EDGES[:-1]
         fitted = int(np.searchsorted(lower, FITTED_ABOVE * (1.0 - 1e-9)))
         used = int(np.searchsorted(lower, SMOOTHED_ABOVE * (1.0 - 1e-9)))
-        rate, covariance, chosen = smooth(total[:, fitted:], events[:, 0])
-        stiffness = list(chosen)
-        photons[:, used:] = rate[:, used - fitted :]
-        error[:, used:] = np.sqrt(np.diagonal(covariance, axis1=1, axis2=2))[:, used - fitted :]
+        rate, covariance, chosen = smooth(total[smoothed_rows, fitted:], events[smoothed_rows, 0])
+        stiffness = [float(value) for value in chosen]
+        photons[smoothed_rows, used:] = rate[:, used - fitted :]
+        error[smoothed_rows, used:] = np.sqrt(np.diagonal(covariance, axis1=1, axis2=2))[:, used - fitted :]
         above = covariance[:, ::-1, ::-1].cumsum(axis=1).cumsum(axis=2)[:, ::-1, ::-1]
         smoothed = np.diagonal(above, axis1=1, axis2=2)[:, used - fitted :]
-        variance[:, :used] = variance[:, :used] - variance[:, used : used + 1] + smoothed[:, :1]
-        variance[:, used:] = smoothed
+        counted = variance[smoothed_rows, :used] - variance[smoothed_rows, used][:, None]
+        variance[smoothed_rows, :used] = counted + smoothed[:, :1]
+        variance[smoothed_rows, used:] = smoothed
     return {
         f"{channel}_mass": sums["mass"][rows],
         f"{channel}_photons": photons.astype(np.float32),
@@ -153,7 +158,11 @@ def main() -> None:
             photons,
             "photon_spectra.npz",
             "photons per annihilation in bins of log10(E/m)",
-            {"smoothed_above_x": SMOOTHED_ABOVE, "as_counted": AS_COUNTED, "stiffness": stiffness},
+            {
+                "smoothed_above_x": SMOOTHED_ABOVE,
+                "as_counted_near_threshold": LINES_NEAR_THRESHOLD,
+                "stiffness": stiffness,
+            },
         ),
         (others, "particle_spectra.npz", "particles per annihilation in bins of log10(E/m), antiprotons kinetic", {}),
     ):
