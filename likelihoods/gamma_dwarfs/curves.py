@@ -51,7 +51,8 @@ def masses_of(channel: str, points: int, response: EnergyResponse, table: Photon
         low = max(low, 1.01 * THRESHOLDS.get(channel, 0.0), 1.5 * float(response.edges[0]))
         high = min(high, _ABOVE_BINS * float(response.edges[-1]))
     if low >= high:
-        return np.zeros(0)
+        rule = f"needs masses above {low:.3g} GeV, of which the telescope's energies see nothing"
+        raise InputError([Problem("curve", rule, channel)])
     return np.geomspace(low, high, points)
 
 

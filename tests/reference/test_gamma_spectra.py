@@ -217,7 +217,7 @@ def test_all_energy_is_found_in_the_particles():
         energy += 2.0 * (protons + number * 0.938272 / (2.0 * others[f"{channel}_mass"]))
         # Particles and antiparticles fluctuate apart; above 300 GeV there are too few events for this check.
         assert energy[others[f"{channel}_mass"] <= 300.0] == pytest.approx(1.0, abs=0.015), channel
-    # Michel decay: each muon gives its positron 7/20 of its energy, one of two muons is positive (less final radiation).
+    # Michel decay: each muon gives its positron 7/20 of its energy, one of two muons is positive, less radiation.
     relative = others["mumu_positrons_energy_fraction"]
     assert relative[5] == pytest.approx(0.5 * 0.35, rel=0.03)
 

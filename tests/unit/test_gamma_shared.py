@@ -192,6 +192,14 @@ def test_unknown_curves_and_levels_are_refused(curve, level, where):
     assert caught.value.problems[0].where == where
 
 
+def test_a_final_state_out_of_reach_is_refused(path):
+    """Energies end at 30 GeV; at 0.3 GeV instead, even the lightest tops are out of reach."""
+    assert shared_term(path).limit_curve("tt", points=2, pseudo_experiments=0).x_values[0] > 172.7
+    path.write_text(SHARED.replace("edges = [1.0, 3.0, 10.0, 30.0]", "edges = [0.1, 0.15, 0.2, 0.3]"))
+    with pytest.raises(InputError, match="masses above 174 GeV"):
+        shared_term(path).limit_curve("tt", points=2)
+
+
 def test_an_excess_is_found_in_its_target():
     """Counts of one target alone are raised by the expectation of a strong signal."""
     skua, truth = term(), candidate(60.0, {"bb": 3e-25})
