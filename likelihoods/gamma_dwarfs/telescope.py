@@ -4,6 +4,7 @@ A TOML file with these keys; "per bin" means one number for all energy bins or a
 
     title = "..."                     # shown beside results
     invented = true                   # optional: demo data, said wherever results show
+    j_systematic = "profile_shape"    # optional: name of a shared shift of all log10 J, see below
 
     [energy]
     edges = [0.5, 1.0, 2.0]           # GeV, rising, one more than bins
@@ -25,6 +26,18 @@ A TOML file with these keys; "per bin" means one number for all energy bins or a
     observed = [13, 4]                # counts per bin
     exposure = 1.8e11                 # optional, overrides the telescope's
     containment = 0.6                 # optional, overrides the telescope's
+    shared_background = "diffuse"     # optional: name of one of [[shared_backgrounds]]
+    log10_j_shift = -0.1              # optional: dex by which log10 J moves per unit of the j_systematic
+    velocity_dispersion = 9.0         # optional: of the stars along the line of sight, km/s
+
+    [[shared_backgrounds]]            # optional: levels that several targets have in common
+    name = "diffuse"
+    error = 0.04                      # relative, at most 0.5
+
+A shared background level (mean 1) and the shared systematic of J (standard normal) are nuisance parameters of the scan,
+under the names given here: terms that use the same name share them. A target with a velocity dispersion s annihilates
+at the relative velocity sqrt(6) s instead of at `candidate.DWARF_VELOCITY`, which is the root mean square of a
+Maxwellian and therefore exact for s-wave and p-wave annihilation; near a narrow resonance it is an approximation.
 
 Exposure and containment apply to the bin in which a photon is seen. Bins must have some background: without it
 a single stray photon would exclude everything.
@@ -45,18 +58,21 @@ from scanfit.priors import FloatArray
 from scanfit.validation import Options, check, read_toml
 
 from .dispersion import EnergyResponse, normal_response
+from .galaxies import (
+    GalaxyOptions,
+    Name,
+    SharedNuisance,
+    as_array,
+    repeated,
+    shared_shift,
+    target_problems,
+    velocities,
+)
 
-
-def _as_array(value: Any) -> Any:
-    """One number stands for an array of one."""
-    return (value,) if isinstance(value, int | float) and not isinstance(value, bool) else value
-
-
-PerBin = Annotated[tuple[PositiveFloat, ...], BeforeValidator(_as_array), Field(min_length=1)]
+PerBin = Annotated[tuple[PositiveFloat, ...], BeforeValidator(as_array), Field(min_length=1)]
 Fractions = Annotated[
-    tuple[Annotated[float, Field(gt=0.0, le=1.0)], ...], BeforeValidator(_as_array), Field(min_length=1)
+    tuple[Annotated[float, Field(gt=0.0, le=1.0)], ...], BeforeValidator(as_array), Field(min_length=1)
 ]
-JError = Annotated[tuple[PositiveFloat, ...], BeforeValidator(_as_array), Field(min_length=1, max_length=2)]
 
 
 class DispersionOptions(Options):
@@ -87,17 +103,22 @@ class TelescopeOptions(Options):
     containment: Fractions = (1.0,)
 
 
-class TargetOptions(Options):
-    """One target."""
+class TargetOptions(GalaxyOptions):
+    """One target and its counts."""
 
-    name: str = Field(min_length=1)
-    log10_j: float = Field(ge=10.0, le=25.0)
-    log10_j_error: JError
     background: PerBin
     background_error: float = Field(default=0.0, ge=0.0, le=0.5)
     observed: tuple[NonNegativeInt, ...]
     exposure: PerBin | None = None
     containment: Fractions | None = None
+    shared_background: str | None = None
+
+
+class SharedBackgroundOptions(Options):
+    """A background level that several targets have in common."""
+
+    name: Name
+    error: float = Field(gt=0.0, le=0.5)
 
 
 class DataFile(Options):
@@ -105,8 +126,10 @@ class DataFile(Options):
 
     title: str
     invented: bool = False
+    j_systematic: Name | None = None
     energy: EnergyOptions
     telescope: TelescopeOptions
+    shared_backgrounds: tuple[SharedBackgroundOptions, ...] = ()
     targets: tuple[TargetOptions, ...]
 
 
@@ -136,6 +159,10 @@ class Observation:
         Relative error of the background and its measured scale (1 in real data; pseudo-data fluctuate it).
     observed : ndarray, shape (n_t, n_b)
         Counts; not integers in expected data.
+    shared : tuple of SharedNuisance
+        What targets have in common.
+    velocity : ndarray, shape (n_t,), or None
+        Relative velocity (c = 1) of annihilation; None where `candidate.DWARF_VELOCITY` holds for all.
     """
 
     title: str
@@ -150,6 +177,8 @@ class Observation:
     background_error: FloatArray
     background_centre: FloatArray
     observed: FloatArray
+    shared: tuple[SharedNuisance, ...] = ()
+    velocity: FloatArray | None = None
 
 
 def read_observation(path: Path) -> Observation:
@@ -190,6 +219,20 @@ def read_observation(path: Path) -> Observation:
         background_error=np.array([target.background_error for target in targets], dtype=float),
         background_centre=np.ones(len(targets)),
         observed=np.array([target.observed for target in targets], dtype=float),
+        shared=(
+            *shared_shift(data.j_systematic, targets),
+            *(
+                SharedNuisance(
+                    shared.name,
+                    "background",
+                    np.array([float(target.shared_background == shared.name) for target in targets]),
+                    shared.error,
+                    1.0,
+                )
+                for shared in data.shared_backgrounds
+            ),
+        ),
+        velocity=velocities(targets),
     )
 
 
@@ -223,6 +266,7 @@ def _energy_problems(energy: EnergyOptions) -> list[Problem]:
 
 def _length_problems(data: DataFile) -> list[Problem]:
     bins = len(data.energy.edges) - 1
+    levels = tuple(level.name for level in data.shared_backgrounds)
     problems = []
 
     def one_or_all(where: str, values: tuple[Any, ...] | None) -> None:
@@ -231,8 +275,6 @@ def _length_problems(data: DataFile) -> list[Problem]:
                 Problem(where, f"must be one number or have {bins} entries, one per energy bin", len(values))
             )
 
-    if not data.targets:
-        problems.append(Problem("targets", "there must be at least one target"))
     one_or_all("telescope.exposure", data.telescope.exposure)
     one_or_all("telescope.containment", data.telescope.containment)
     for number, target in enumerate(data.targets):
@@ -243,9 +285,9 @@ def _length_problems(data: DataFile) -> list[Problem]:
         if len(target.observed) != bins:
             rule = f"must have {bins} entries, one per energy bin"
             problems.append(Problem(f"{where}.observed", rule, len(target.observed)))
-    names = [target.name for target in data.targets]
-    problems += [
-        Problem("targets", "two targets have this name", name)
-        for name in sorted({n for n in names if names.count(n) > 1})
-    ]
-    return problems
+        if target.shared_background is not None and target.shared_background not in levels:
+            rule = "not the name of one of shared_backgrounds"
+            problems.append(Problem(f"{where}.shared_background", rule, target.shared_background, levels))
+    taken = [*levels, *([data.j_systematic] if data.j_systematic else [])]
+    problems += [Problem("shared_backgrounds", "this name is taken", name) for name in repeated(taken)]
+    return [*problems, *target_problems(data.j_systematic, data.targets)]

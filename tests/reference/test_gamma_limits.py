@@ -8,6 +8,7 @@ import pytest
 
 from scanfit.likelihoods.gamma_dwarfs.dispersion import normal_response
 from scanfit.likelihoods.gamma_dwarfs.likelihood import DwarfLikelihood
+from scanfit.likelihoods.gamma_dwarfs.limits import upper_limit
 from scanfit.likelihoods.gamma_dwarfs.spectra import TABLE_CHANNELS, TABLE_COLUMN, photon_table
 from scanfit.likelihoods.gamma_dwarfs.telescope import Observation
 from scanfit.likelihoods.gamma_dwarfs.term import annihilation_factor
@@ -65,7 +66,7 @@ def limit(likelihood, channel, mass):
     weights = np.zeros(len(TABLE_CHANNELS))
     weights[TABLE_COLUMN[channel]] = 1.0
     photons = likelihood.observation.response.photons(photon_table(), weights, 0.0, mass)
-    return likelihood.upper_limit(annihilation_factor(particle(mass)) * photons)
+    return upper_limit(likelihood, annihilation_factor(particle(mass)) * photons)
 
 
 def test_the_targets_are_the_published_ones():

@@ -11,6 +11,7 @@ from scipy.stats import norm, poisson
 from scanfit.likelihoods.gamma_dwarfs import j_factor
 from scanfit.likelihoods.gamma_dwarfs.dispersion import normal_response
 from scanfit.likelihoods.gamma_dwarfs.likelihood import DwarfLikelihood
+from scanfit.likelihoods.gamma_dwarfs.limits import one_sided_fall, upper_limit
 from scanfit.likelihoods.gamma_dwarfs.telescope import Observation
 
 EDGES = np.geomspace(0.5, 500.0, 25)
@@ -195,7 +196,7 @@ def test_limits_cover_where_j_is_well_known():
 
 
 def test_limits_are_too_strong_where_j_is_badly_known_as_documented():
-    """Measured here and said in `DwarfLikelihood.upper_limit` and the term's caveats; a property of profiling J.
+    """Measured here and said in `FluxScan.upper_limit` and the term's caveats; a property of profiling J.
 
     Measured values of J scatter evenly in log J, so on average they exceed the true J, and weak targets cannot tell.
     """
@@ -215,6 +216,33 @@ def test_the_limit_of_an_empty_bin_is_the_textbook_one():
         j_plus=np.array([1e-4]),
     )
     likelihood = DwarfLikelihood(data, "profile")
-    photons = likelihood.upper_limit(SHAPE) * likelihood.signal(SHAPE).sum()
+    photons = upper_limit(likelihood, SHAPE) * likelihood.signal(SHAPE).sum()
     assert photons == pytest.approx(0.5 * norm.isf(0.05) ** 2, rel=1e-4)
-    assert math.isinf(likelihood.upper_limit(0.0 * SHAPE))
+    assert 2.0 * one_sided_fall(0.95) == pytest.approx(2.706, abs=5e-4)
+    assert 2.0 * one_sided_fall(0.90) == pytest.approx(1.642, abs=5e-4)
+    assert math.isinf(upper_limit(likelihood, 0.0 * SHAPE))
+
+
+@pytest.mark.parametrize(
+    ("counts", "level", "published"),
+    [
+        # Poisson upper limits without background, as every statistics review tabulates them (computed independently);
+        # with a prior flat in the signal the credible limit is the same number.
+        (0, 0.95, 2.996),
+        (0, 0.90, 2.303),
+        (1, 0.95, 4.744),
+        (3, 0.95, 7.754),
+        (10, 0.90, 15.407),
+    ],
+)
+def test_credible_limits_are_the_textbook_ones(counts, level, published):
+    data = dataclasses.replace(
+        observation(1, np.random.default_rng(4)),
+        observed=np.where(np.arange(24) == 3, counts, 0.0)[None, :],
+        background=np.full((1, 24), 1e-9),
+        j_minus=np.array([1e-4]),
+        j_plus=np.array([1e-4]),
+    )
+    likelihood = DwarfLikelihood(data, "marginal")
+    photons = upper_limit(likelihood, SHAPE, level) * likelihood.signal(SHAPE).sum()
+    assert photons == pytest.approx(published, rel=1e-3)

@@ -11,6 +11,7 @@ from scanfit.errors import InputError, PointError
 from scanfit.likelihoods.candidate import CHANNELS, Annihilation, Candidate, CosmologyOptions
 from scanfit.likelihoods.constants import GEV_M2_TO_CM3_S
 from scanfit.likelihoods.gamma_dwarfs.dispersion import EnergyResponse, normal_response
+from scanfit.likelihoods.gamma_dwarfs.limits import upper_limit
 from scanfit.likelihoods.gamma_dwarfs.spectra import LINE, PHOTONLESS, TABLE_CHANNELS, TABLE_COLUMN, photon_table
 from scanfit.likelihoods.gamma_dwarfs.telescope import read_observation
 from scanfit.likelihoods.gamma_dwarfs.term import GammaDwarfs
@@ -74,7 +75,7 @@ def test_the_demo_says_that_it_is_invented_and_how_it_was_made():
 def test_the_demo_limit_lies_near_the_thermal_cross_section(inner):
     skua = term(inner)
     found = candidate(80.0, {"bb": 2.2e-26})
-    limit = 2.2e-26 * skua.likelihood.upper_limit(skua.flux_per_j(found))
+    limit = 2.2e-26 * upper_limit(skua.likelihood, skua.flux_per_j(found))
     assert 1e-26 < limit < 4e-26
     assert skua.loglike(found, {}) < skua.loglike(candidate(80.0, {"bb": 0.0}), {})
     assert skua.loglike(candidate(80.0, {"bb": 100.0 * limit}), {}) < skua.loglike(found, {}) - 50.0
