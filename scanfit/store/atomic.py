@@ -132,7 +132,8 @@ def write_parquet(path: Path, frame: pd.DataFrame) -> None:
 def write_npz(path: Path, arrays: Mapping[str, npt.ArrayLike]) -> None:
     """Write arrays by name as a compressed NumPy archive; equal arrays give equal bytes."""
     content = BytesIO()
-    np.savez_compressed(content, **{name: np.asarray(array) for name, array in arrays.items()})
+    named: dict[str, Any] = {name: np.asarray(array) for name, array in arrays.items()}
+    np.savez_compressed(content, **named)
     write_bytes(path, content.getvalue())
 
 
