@@ -15,6 +15,7 @@ from typing import Any, ClassVar, Generic, Literal, Protocol, Self, TypeVar, run
 
 import numpy as np
 
+from scanfit.errors import InputError, Problem
 from scanfit.priors import FloatArray
 from scanfit.space import Parameter
 from scanfit.validation import Options
@@ -125,6 +126,24 @@ class Observable:
     note: str = ""
 
 
+@dataclass(frozen=True)
+class LimitCurve:
+    """Upper limits of one search alone.
+
+    Arrays have shape (n,); `bands` has shape (n, 5): quantiles 2.5, 16, 50, 84, 97.5 % of background-only limits, or
+    None. Infinite where the search says nothing.
+    """
+
+    title: str
+    x: Quantity
+    y: Quantity
+    level: float
+    x_values: FloatArray
+    observed: FloatArray | None
+    bands: FloatArray | None
+    caveats: tuple[str, ...] = ()
+
+
 class Term(ABC, Generic[PredictionT]):
     """One search: data, and the likelihood of the data given a prediction.
 
@@ -141,6 +160,8 @@ class Term(ABC, Generic[PredictionT]):
     """What a reader of the result must know: invented data, an approximate likelihood, an extrapolated table."""
     data_files: tuple[Path, ...] = ()
     """Every file the term read; they are part of the run's fingerprint."""
+    curves: ClassVar[Mapping[str, str]] = {}
+    """Names of the upper limits that the term can draw alone, each with one line that describes it."""
 
     @abstractmethod
     def __init__(self, options: Any, context: BuildContext) -> None: ...
@@ -166,6 +187,37 @@ class Term(ABC, Generic[PredictionT]):
     def expected(self, prediction: PredictionT, values: Mapping[str, float]) -> Self:
         """Return the same term holding the expected (Asimov) data of this point."""
         raise NotImplementedError(f"{self.name} has no expected data")
+
+    def limit_curve(
+        self,
+        curve: str,
+        *,
+        level: float | None = None,
+        points: int = 40,
+        pseudo_experiments: int = 200,
+        rng: np.random.Generator | None = None,
+    ) -> LimitCurve:
+        """Upper limits of this search alone, observed and expected without a signal.
+
+        Parameters
+        ----------
+        curve : str
+            One of `curves`.
+        level : float, optional
+            Confidence or credibility; None for what the field usually quotes.
+        points : int
+            Points of the abscissa.
+        pseudo_experiments : int
+            Background-only data sets behind the bands; 0 leaves the bands out.
+        rng : Generator, optional
+            Source of the pseudo-data; None for a fixed seed.
+
+        Raises
+        ------
+        InputError
+            If the term has no curve of this name.
+        """
+        raise InputError([Problem("curve", f"{self.name} has no limit curve of this name", curve, tuple(self.curves))])
 
 
 class Evaluate(Protocol):

@@ -22,7 +22,7 @@ _CONTRACTS: Final[dict[str, type]] = {"models": Model, "terms": Term, "explorers
 PluginT = TypeVar("PluginT")
 
 
-def installed(kind: Kind | Literal["figures"]) -> dict[str, EntryPoint]:
+def installed(kind: Kind | Literal["figures", "drawings"]) -> dict[str, EntryPoint]:
     """Installed plug-ins of one kind, by name, in alphabetical order."""
     return {point.name: point for point in sorted(entry_points(group=f"scanfit.{kind}"), key=lambda point: point.name)}
 

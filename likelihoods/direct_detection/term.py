@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING, Self
 
 import numpy as np
 
-from scanfit.contracts import BuildContext, Observable, Term
+from scanfit.contracts import BuildContext, LimitCurve, Observable, Term
 from scanfit.errors import MissingPrediction
 from scanfit.priors import FloatArray
 from scanfit.validation import Options
@@ -17,6 +17,7 @@ from .counting import BinnedCounts
 from .experiment import Experiment, read_experiment
 from .halo import HALO_NUISANCES, Halo
 from .isotopes import mass_fractions
+from .sensitivity import CURVES, USUAL_LEVEL, LimitMethod, limit_curve
 from .spectrum import CountingResponse, fold
 from .spin_dependent import lacks_structure, nuclear_spin
 
@@ -29,6 +30,9 @@ class DirectDetectionOptions(Options):
 
     data: str
     """Experiment file, relative to the run file; `experiment` describes it field by field."""
+    limit_method: LimitMethod = "flat-prior"
+    """How ``scanfit limit`` makes limits of this experiment alone; a scan does not use it. The last three of
+    flat-prior, likelihood-ratio, classical, cls and unified are for a single bin."""
 
 
 class DirectDetection(Term["Candidate"]):
@@ -56,9 +60,11 @@ class DirectDetection(Term["Candidate"]):
     summary = "events in a direct-detection experiment, binned in recoil energy, with uncertain backgrounds"
     cost = 0.03
     nuisances = HALO_NUISANCES
+    curves = CURVES
 
     def __init__(self, options: DirectDetectionOptions, context: BuildContext) -> None:
         path = context.folder / options.data
+        self._limit_method = options.limit_method
         self.experiment: Experiment = read_experiment(path)
         self.data_files = (path,)
         self.caveats = _caveats(self.experiment)
@@ -119,6 +125,30 @@ class DirectDetection(Term["Candidate"]):
 
     def expected(self, prediction: Candidate, values: Mapping[str, float]) -> Self:
         return self._holding(self.counting.asimov(self.signal(prediction, values)))
+
+    def limit_curve(
+        self,
+        curve: str,
+        *,
+        level: float | None = None,
+        points: int = 40,
+        pseudo_experiments: int = 200,
+        rng: np.random.Generator | None = None,
+    ) -> LimitCurve:
+        return limit_curve(
+            self.experiment.title,
+            self._response,
+            self.counting,
+            lambda generator: (self._response, self.counting.draw(np.zeros_like(self.counting.background), generator)),
+            curve,
+            level=USUAL_LEVEL if level is None else level,
+            points=points,
+            pseudo_experiments=pseudo_experiments,
+            rng=rng or np.random.default_rng(1),
+            method=self._limit_method,
+            observed=not self.experiment.planned,
+            caveats=self.caveats,
+        )
 
     def _holding(self, counting: BinnedCounts) -> Self:
         """The same term with other data; the folded response is shared, it never changes."""
