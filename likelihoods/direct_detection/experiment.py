@@ -193,13 +193,7 @@ class Experiment(Options):
     @field_validator("target")
     @classmethod
     def _known_nuclei(cls, target: dict[str, float]) -> dict[str, float]:
-        unknown = [name for name in target if name not in target_names()]
-        if unknown:
-            near = [nearest_name(name, target_names()) for name in unknown]
-            hints = [f"{a!r} (did you mean {b!r}?)" if b else repr(a) for a, b in zip(unknown, near, strict=True)]
-            elements = ", ".join(name for name in target_names() if "-" not in name)
-            raise ValueError(f"unknown element or isotope {', '.join(hints)}; elements: {elements}")
-        return target
+        return check_target(target)
 
     @field_validator("bins")
     @classmethod
@@ -277,6 +271,17 @@ def read_experiment(path: Path) -> Experiment:
         With every broken rule, or if the file cannot be read.
     """
     return check(Experiment, read_toml(path), source=str(path))
+
+
+def check_target(target: dict[str, float]) -> dict[str, float]:
+    """Return `target`, or raise ValueError if it names a nucleus that is not known here."""
+    unknown = [name for name in target if name not in target_names()]
+    if unknown:
+        near = [nearest_name(name, target_names()) for name in unknown]
+        hints = [f"{a!r} (did you mean {b!r}?)" if b else repr(a) for a, b in zip(unknown, near, strict=True)]
+        elements = ", ".join(name for name in target_names() if "-" not in name)
+        raise ValueError(f"unknown element or isotope {', '.join(hints)}; elements: {elements}")
+    return target
 
 
 def _same_length(name: str, values: tuple[Any, ...], other: str, reference: tuple[Any, ...] | None) -> None:

@@ -168,5 +168,5 @@ def limit_curve(
         x_values=masses,
         observed=seen,
         bands=bands,
-        caveats=(*caveats, conventions),
+        caveats=(*(text for text in caveats if curve != "si" or "spin-dependent" not in text), conventions),
     )

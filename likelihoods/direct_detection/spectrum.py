@@ -78,7 +78,7 @@ def differential_rate(
     energy = np.asarray(energy, dtype=float)
     rate = np.zeros_like(energy)
     for isotope, fraction in mass_fractions(target).items():
-        response = _amplitudes_squared(isotope, couplings) @ nuclear_responses(energy, isotope)
+        response = amplitudes_squared(isotope, couplings) @ nuclear_responses(energy, isotope)
         speeds = _speed_per_root_energy(isotope.mass, mass) * np.sqrt(energy)
         rate += fraction * response * halo.mean_inverse_speed(speeds)
     return np.asarray(RATE_UNIT * halo.local_density / mass * rate)
@@ -91,7 +91,7 @@ def nuclear_responses(energy: FloatArray, isotope: Isotope) -> FloatArray:
     return np.vstack([coherent, spin_factor * structure_functions(energy, isotope)])
 
 
-def _amplitudes_squared(isotope: Isotope, couplings: NucleonCouplings) -> FloatArray:
+def amplitudes_squared(isotope: Isotope, couplings: NucleonCouplings) -> FloatArray:
     coherent = isotope.protons * couplings.f_proton + isotope.neutrons * couplings.f_neutron
     isoscalar = couplings.a_proton + couplings.a_neutron
     isovector = couplings.a_proton - couplings.a_neutron

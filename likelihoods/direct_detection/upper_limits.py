@@ -30,7 +30,7 @@ _DEPTH: Final = 20.0
 _NORMAL_NODES, _NORMAL_WEIGHTS = roots_hermitenorm(24)
 _FINE: Final = 0.002
 """Step in events of the unified construction, after a coarse pass."""
-_COARSE: Final = 0.05
+_COARSE: Final = 0.02
 
 
 def flat_prior(counting: BinnedCounts, shape: FloatArray, level: float, fixed: FloatArray | None = None) -> float:
@@ -85,9 +85,11 @@ def unified(observed: int, background: float, level: float) -> tuple[float, floa
     As in that paper an upper end never falls when the background grows: it is the largest among all larger backgrounds.
     """
     low, high = _unified_raw(observed, background, level)
-    # The raw end saws up and down with the background; its teeth are shorter than one event.
-    for more in np.arange(0.02, 1.5, 0.02):
-        high = max(high, _unified_raw(observed, background + float(more), level, coarse_only=high)[1])
+    # The raw end saws up and down with the background, with teeth shorter than 1.5 events. Larger backgrounds lie on a
+    # fixed grid, so that all smaller ones see the same teeth.
+    first = math.floor(100.0 * background) + 1
+    for larger in range(first, first + 150):
+        high = max(high, _unified_raw(observed, 0.01 * larger, level, coarse_only=high)[1])
     return low, high
 
 
@@ -121,9 +123,10 @@ def _unified_raw(
 ) -> tuple[float, float]:
     """Ends of the interval; with `coarse_only` the upper end is refined only if it can exceed that value."""
     end = observed + 10.0 + 5.0 * math.sqrt(observed + background + 1.0)
-    start = 0.0 if coarse_only is None else max(coarse_only - 2.0 * _COARSE, 0.0)
+    # Accepted signals can have holes: every pass looks at the same ones.
+    start = 0 if coarse_only is None else max(math.floor(coarse_only / _COARSE) - 2, 0)
     end = end if coarse_only is None else min(end, coarse_only + 1.5)
-    signals = np.arange(start, end, _COARSE)
+    signals = _COARSE * np.arange(start, math.ceil(end / _COARSE))
     inside = signals[_accepted(observed, signals, background, level)]
     if inside.size == 0:
         return 0.0, 0.0
