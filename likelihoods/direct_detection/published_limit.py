@@ -46,6 +46,7 @@ from scanfit.validation import Options, check, read_toml
 
 from ..candidate import NucleonCouplings
 from ..constants import GEV_M2_TO_CM2, NEUTRON_MASS, PROTON_MASS
+from .columns import read_columns
 from .experiment import check_target
 from .isotopes import mass_fractions
 from .spectrum import amplitudes_squared, nuclear_responses
@@ -196,32 +197,8 @@ def read_published_limit(path: Path) -> tuple[PublishedLimit, tuple[Path, ...]]:
     if found.table.csv is None:
         return found, (path,)
     table_path = path.parent / found.table.csv
-    masses, cross_sections = _read_columns(table_path)
+    masses, cross_sections = read_columns(table_path, "table.csv", "mass in GeV and cross section in cm^2")
     table = check(
         CurveTable, {"mass_gev": masses, "cross_section_cm2": cross_sections}, where="table", source=str(table_path)
     )
     return found.model_copy(update={"table": table}), (path, table_path)
-
-
-def _read_columns(path: Path) -> tuple[tuple[float, ...], tuple[float, ...]]:
-    try:
-        lines = path.read_text(encoding="utf-8-sig").splitlines()
-    except (OSError, UnicodeDecodeError) as error:
-        raise InputError([Problem("table.csv", f"the file cannot be read: {error}")], str(path)) from None
-    rows: list[tuple[float, float]] = []
-    header_allowed = True
-    for number, line in enumerate(lines, start=1):
-        if not line.strip() or line.lstrip().startswith("#"):
-            continue
-        fields = line.replace(",", " ").replace(";", " ").split()
-        try:
-            mass, cross_section = map(float, fields)
-        except ValueError:
-            if header_allowed:
-                header_allowed = False
-                continue
-            rule = f"line {number} must hold two numbers, mass in GeV and cross section in cm^2"
-            raise InputError([Problem("table.csv", rule, line)], str(path)) from None
-        header_allowed = False
-        rows.append((mass, cross_section))
-    return tuple(row[0] for row in rows), tuple(row[1] for row in rows)

@@ -3,8 +3,9 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Callable, Mapping
-from typing import TYPE_CHECKING, Final, Literal, TypeAlias
+from collections.abc import Mapping
+from itertools import pairwise
+from typing import Final, Literal, TypeAlias
 
 import numpy as np
 
@@ -16,18 +17,23 @@ from ..candidate import NucleonCouplings
 from ..constants import GEV_M2_TO_CM2, NEUTRON_MASS, PROTON_MASS
 from . import upper_limits
 from .counting import BinnedCounts
+from .data import Data
+from .detector import Efficiency
+from .experiment import Bins, Experiment
+from .folding import CountingResponse
 from .halo import Halo
-
-if TYPE_CHECKING:
-    from .spectrum import CountingResponse
+from .neutrinos import BORON8_FLUX, FLUXES
 
 LimitMethod: TypeAlias = Literal["flat-prior", "likelihood-ratio", "classical", "cls", "unified"]
 
+FLOOR: Final = "neutrino-floor"
 CURVES: Final[Mapping[str, str]] = {
     "si": "spin-independent cross section on nucleons, equal for protons and neutrons",
     "sd-proton": "spin-dependent cross section on protons alone",
     "sd-neutron": "spin-dependent cross section on neutrons alone",
+    FLOOR: "spin-independent cross section that an ideal detector of this target, exposure and window would exclude",
 }
+_FLOOR_BINS: Final = 24
 _SYMBOLS: Final = {
     "si": r"\sigma^\mathrm{SI}_p", "sd-proton": r"\sigma^\mathrm{SD}_p", "sd-neutron": r"\sigma^\mathrm{SD}_n",
 }  # fmt: skip
@@ -55,7 +61,7 @@ def couplings_of(curve: str, mass: float, cross_section: float) -> NucleonCoupli
     InputError
         If there is no such curve.
     """
-    if curve not in CURVES:
+    if curve not in CURVES or curve == FLOOR:
         raise InputError([Problem("curve", "direct detection has no limit curve of this name", curve, tuple(CURVES))])
     nucleon = NEUTRON_MASS if curve == "sd-neutron" else PROTON_MASS
     reduced = mass * nucleon / (mass + nucleon)
@@ -67,7 +73,7 @@ def couplings_of(curve: str, mass: float, cross_section: float) -> NucleonCoupli
 
 
 def upper_limit(
-    counting: BinnedCounts, shape: FloatArray, level: float, method: LimitMethod, fixed: FloatArray | None = None
+    counting: BinnedCounts, shape: FloatArray, level: float, method: LimitMethod
 ) -> float:
     """Upper limit on the total signal in events; `shape` is the signal in each bin for one event in total.
 
@@ -77,20 +83,18 @@ def upper_limit(
         If the method asks for one bin, or for a known background, and there is none.
     """
     if method == "flat-prior":
-        return upper_limits.flat_prior(counting, shape, level, fixed)
+        return upper_limits.flat_prior(counting, shape, level)
     if method == "likelihood-ratio":
-        return upper_limits.likelihood_ratio(counting, shape, level, fixed)
+        return upper_limits.likelihood_ratio(counting, shape, level)
     problem = None
     spread = float(np.sqrt((counting.loading**2).sum()))
     if counting.background.size != 1:
         problem = "this method needs an experiment with a single bin"
     elif spread > 0.0 and method == "unified":
         problem = "this method needs an exactly known background"
-    elif spread > 0.0 and fixed is not None and fixed.any():
-        problem = "this method takes no uncertain background beside neutrinos"
     if problem:
         raise InputError([Problem("limit_method", problem, method, ("flat-prior", "likelihood-ratio"))])
-    background = float(counting.background[0] + (0.0 if fixed is None else fixed[0]))
+    background = float(counting.background[0])
     observed = float(counting.observed[0])
     if method == "unified":
         return upper_limits.unified(round(observed), background, level)[1]
@@ -104,14 +108,14 @@ def yields(response: CountingResponse, curve: str, masses: FloatArray, halo: Hal
 
 
 def limits(
-    counting: BinnedCounts, signal: FloatArray, level: float, method: LimitMethod, fixed: FloatArray | None = None
+    counting: BinnedCounts, signal: FloatArray, level: float, method: LimitMethod
 ) -> FloatArray:
     """Upper limits in cm^2 from `yields`, shape (n_masses,); infinite where no recoil is seen."""
     found = np.full(len(signal), np.inf)
     for index, row in enumerate(signal):
-        total = float(row.sum())
+        total = float(row.sum())  # cells around single events are too narrow to count
         if total > 0.0:
-            found[index] = _UNIT * upper_limit(counting, row / total, level, method, fixed) / total
+            found[index] = _UNIT * upper_limit(counting, row / total, level, method) / total
     return found
 
 
@@ -124,11 +128,27 @@ def mass_range(response: CountingResponse, curve: str, halo: Halo, points: int) 
     return np.geomspace(trial[np.argmax(total > _LIGHTEST_YIELD * total.max())], _HEAVIEST, points)
 
 
+def ideal_experiment(experiment: Experiment) -> Experiment:
+    """The same target, exposure and window, but every recoil seen as it is, and no background but neutrinos."""
+    low, high = experiment.intervals_kev[0][0], experiment.intervals_kev[-1][1]
+    low, high = (float(end) for end in experiment.true_energy(np.array([max(low, 0.1), high])))
+    edges = np.geomspace(low, high, _FLOOR_BINS + 1)
+    edges[0], edges[-1] = low, high
+    return Experiment(
+        title=experiment.title,
+        source=experiment.source,
+        planned=True,
+        exposure_tonne_year=experiment.exposure_tonne_year,
+        target=experiment.target,
+        neutrinos=tuple(FLUXES),
+        bins=Bins(intervals_kev=tuple(pairwise(edges.tolist())), background=(0.0,) * _FLOOR_BINS),
+        efficiency=Efficiency(energy_kev=(low, high), value=(1.0, 1.0)),
+    )
+
+
 def limit_curve(
     title: str,
-    response: CountingResponse,
-    counting: BinnedCounts,
-    pseudo_data: Callable[[np.random.Generator], tuple[CountingResponse, BinnedCounts]],
+    data: Data,
     curve: str,
     *,
     level: float,
@@ -138,22 +158,26 @@ def limit_curve(
     method: LimitMethod,
     observed: bool,
     caveats: tuple[str, ...],
-    fixed: FloatArray | None = None,
     halo: Halo | None = None,
 ) -> LimitCurve:
-    """Build the curve; `pseudo_data` gives response and counts of a data set without a signal."""
+    """Build the curve of some data; see `scanfit.contracts.Term.limit_curve`.
+
+    The background holds the neutrinos, whose fluxes vary as `neutrinos` says.
+    """
     halo = halo or Halo()
     couplings_of(curve, 1.0, _UNIT)  # an unknown curve is an error before anything is computed
-    masses = mass_range(response, curve, halo, points)
-    signal = yields(response, curve, masses, halo)
-    seen = limits(counting, signal, level, method, fixed) if observed else None
+    masses = mass_range(data.response, curve, halo, points)
+    signal = yields(data.response, curve, masses, halo)
+    seen = limits(data.neutrinos_in_background(), signal, level, method) if observed else None
     bands = None
     if pseudo_experiments:
         drawn = []
         for _ in range(pseudo_experiments):
-            its_response, its_counting = pseudo_data(rng)
-            its_signal = signal if its_response is response else yields(its_response, curve, masses, halo)
-            drawn.append(limits(its_counting, its_signal, level, method, fixed))
+            flux = max(rng.normal(BORON8_FLUX, BORON8_FLUX * FLUXES["boron-8"].uncertainty), 0.0)
+            twin = data.draw(lambda cells: np.zeros(cells.matrix.shape[-1]), flux, rng)
+            same_cells = twin.response is data.response
+            its_signal = signal if same_cells else yields(twin.response, curve, masses, halo)
+            drawn.append(limits(twin.neutrinos_in_background(), its_signal, level, method))
         # Order statistics, not interpolation: some limits may be infinite.
         bands = np.quantile(np.array(drawn), BAND_QUANTILES, axis=0, method="inverted_cdf").T
     conventions = (

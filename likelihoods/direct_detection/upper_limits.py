@@ -33,7 +33,7 @@ _FINE: Final = 0.002
 _COARSE: Final = 0.02
 
 
-def flat_prior(counting: BinnedCounts, shape: FloatArray, level: float, fixed: FloatArray | None = None) -> float:
+def flat_prior(counting: BinnedCounts, shape: FloatArray, level: float) -> float:
     """Upper limit in events with a flat prior on the total signal.
 
     Parameters
@@ -44,18 +44,16 @@ def flat_prior(counting: BinnedCounts, shape: FloatArray, level: float, fixed: F
         Signal in each bin for one event in total.
     level : float
         Credibility.
-    fixed : ndarray, shape (n_bins,), optional
-        Expected events that belong neither to the signal nor to the uncertain background.
     """
-    return float(_flat_prior(*_arguments(counting, shape, fixed), level))
+    return float(_flat_prior(*_arguments(counting, shape), level))
 
 
-def likelihood_ratio(counting: BinnedCounts, shape: FloatArray, level: float, fixed: FloatArray | None = None) -> float:
+def likelihood_ratio(counting: BinnedCounts, shape: FloatArray, level: float) -> float:
     """Upper limit in events where ln L has fallen from its maximum at s >= 0 by half the squared normal quantile.
 
     The parameters are those of `flat_prior`. The fall of 2 ln L is 1.642 at 90 %.
     """
-    return float(_likelihood_ratio(*_arguments(counting, shape, fixed), 0.5 * float(ndtri(level)) ** 2))
+    return float(_likelihood_ratio(*_arguments(counting, shape), 0.5 * float(ndtri(level)) ** 2))
 
 
 def classical(observed: float, background: float, level: float, spread: float = 0.0) -> float:
@@ -94,11 +92,10 @@ def unified(observed: int, background: float, level: float) -> tuple[float, floa
 
 
 def _arguments(
-    counting: BinnedCounts, shape: FloatArray, fixed: FloatArray | None
-) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray, FloatArray, bool]:
-    offset = np.zeros_like(counting.background) if fixed is None else np.asarray(fixed, dtype=float)
+    counting: BinnedCounts, shape: FloatArray
+) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray, bool]:
     profile = counting.treatment == "profile"
-    return np.ascontiguousarray(shape), offset, counting.background, counting.observed, counting.loading, profile
+    return np.ascontiguousarray(shape), counting.background, counting.observed, counting.loading, profile
 
 
 def _tail(observed: float, signal: float, background: float, spread: float) -> float:
@@ -153,49 +150,49 @@ def _accepted(observed: int, signals: FloatArray, background: float, level: floa
 
 @njit(cache=True, fastmath=False, error_model="numpy")
 def _peak(
-    shape: FloatArray, fixed: FloatArray, background: FloatArray, observed: FloatArray, loading: FloatArray, profile: bool,
+    shape: FloatArray, background: FloatArray, observed: FloatArray, loading: FloatArray, profile: bool,
     precision: float,
 ) -> tuple[float, float, float]:  # fmt: skip
     """Most likely signal, ln L there, and a signal at which ln L has fallen by `_DEPTH` at least."""
     highest: float = max(
-        log_likelihood_of_counts(fixed, background, observed, loading, profile),
-        log_likelihood_of_counts(shape + fixed, background, observed, loading, profile),
+        log_likelihood_of_counts(0.0 * shape, background, observed, loading, profile),
+        log_likelihood_of_counts(shape, background, observed, loading, profile),
     )
     end = 8.0
     for _ in range(60):
-        value = log_likelihood_of_counts(end * shape + fixed, background, observed, loading, profile)
+        value = log_likelihood_of_counts(end * shape, background, observed, loading, profile)
         highest = max(highest, value)
         if value < highest - _DEPTH:
             break
         end *= 2.0
     low, high, golden = 0.0, end, 0.5 * (math.sqrt(5.0) - 1.0)
     left, right = high - golden * (high - low), low + golden * (high - low)
-    at_left = log_likelihood_of_counts(left * shape + fixed, background, observed, loading, profile)
-    at_right = log_likelihood_of_counts(right * shape + fixed, background, observed, loading, profile)
+    at_left = log_likelihood_of_counts(left * shape, background, observed, loading, profile)
+    at_right = log_likelihood_of_counts(right * shape, background, observed, loading, profile)
     while high - low > precision * (1.0 + high):
         if at_left >= at_right:
             high, right, at_right = right, left, at_left
             left = high - golden * (high - low)
-            at_left = log_likelihood_of_counts(left * shape + fixed, background, observed, loading, profile)
+            at_left = log_likelihood_of_counts(left * shape, background, observed, loading, profile)
         else:
             low, left, at_left = left, right, at_right
             right = low + golden * (high - low)
-            at_right = log_likelihood_of_counts(right * shape + fixed, background, observed, loading, profile)
+            at_right = log_likelihood_of_counts(right * shape, background, observed, loading, profile)
     best = 0.5 * (low + high)
-    at_best = log_likelihood_of_counts(best * shape + fixed, background, observed, loading, profile)
-    at_zero = log_likelihood_of_counts(fixed, background, observed, loading, profile)
+    at_best = log_likelihood_of_counts(best * shape, background, observed, loading, profile)
+    at_zero = log_likelihood_of_counts(0.0 * shape, background, observed, loading, profile)
     return (0.0, at_zero, end) if at_zero >= at_best else (best, at_best, end)
 
 
 @njit(cache=True, fastmath=False, error_model="numpy")
 def _fallen(
-    shape: FloatArray, fixed: FloatArray, background: FloatArray, observed: FloatArray, loading: FloatArray, profile: bool,
+    shape: FloatArray, background: FloatArray, observed: FloatArray, loading: FloatArray, profile: bool,
     inside: float, outside: float, height: float, steps: int,
 ) -> float:  # fmt: skip
     """Signal between `inside` and `outside` at which ln L passes `height`, by bisection."""
     for _ in range(steps):
         middle = 0.5 * (inside + outside)
-        if log_likelihood_of_counts(middle * shape + fixed, background, observed, loading, profile) > height:
+        if log_likelihood_of_counts(middle * shape, background, observed, loading, profile) > height:
             inside = middle
         else:
             outside = middle
@@ -204,30 +201,30 @@ def _fallen(
 
 @njit(cache=True, fastmath=False, error_model="numpy")
 def _likelihood_ratio(
-    shape: FloatArray, fixed: FloatArray, background: FloatArray, observed: FloatArray, loading: FloatArray, profile: bool,
+    shape: FloatArray, background: FloatArray, observed: FloatArray, loading: FloatArray, profile: bool,
     fall: float,
 ) -> float:  # fmt: skip
-    best, height, end = _peak(shape, fixed, background, observed, loading, profile, 1e-5)
-    return _fallen(shape, fixed, background, observed, loading, profile, best, end, height - fall, 40)
+    best, height, end = _peak(shape, background, observed, loading, profile, 1e-5)
+    return _fallen(shape, background, observed, loading, profile, best, end, height - fall, 40)
 
 
 @njit(cache=True, fastmath=False, error_model="numpy")
 def _flat_prior(
-    shape: FloatArray, fixed: FloatArray, background: FloatArray, observed: FloatArray, loading: FloatArray, profile: bool,
+    shape: FloatArray, background: FloatArray, observed: FloatArray, loading: FloatArray, profile: bool,
     level: float,
 ) -> float:  # fmt: skip
     """Integrate a Legendre series through the likelihood at Gauss nodes and find its quantile by bisection."""
-    best, height, end = _peak(shape, fixed, background, observed, loading, profile, 1e-2)
+    best, height, end = _peak(shape, background, observed, loading, profile, 1e-2)
     cut = height - _DEPTH
-    high = _fallen(shape, fixed, background, observed, loading, profile, best, end, cut, 8)
+    high = _fallen(shape, background, observed, loading, profile, best, end, cut, 8)
     low = 0.0
-    if best > 0.0 and not log_likelihood_of_counts(fixed, background, observed, loading, profile) > cut:
-        low = _fallen(shape, fixed, background, observed, loading, profile, best, 0.0, cut, 8)
+    if best > 0.0 and not log_likelihood_of_counts(0.0 * shape, background, observed, loading, profile) > cut:
+        low = _fallen(shape, background, observed, loading, profile, best, 0.0, cut, 8)
     n = _NODES.size
     coefficients = np.zeros(n)
     for j in range(n):
         signal = low + 0.5 * (high - low) * (1.0 + _NODES[j])
-        value = log_likelihood_of_counts(signal * shape + fixed, background, observed, loading, profile)
+        value = log_likelihood_of_counts(signal * shape, background, observed, loading, profile)
         weight = _WEIGHTS[j] * math.exp(value - height)
         before, now = 1.0, _NODES[j]
         coefficients[0] += 0.5 * weight

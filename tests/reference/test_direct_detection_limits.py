@@ -119,19 +119,19 @@ def test_limits_of_several_bins(observed: tuple[float, ...], treatment: str) -> 
     background = np.array([2.0, 1.0, 4.0]) * (1.0 if max(observed) < 100.0 else 50.0)
     loading = np.array([[0.2], [0.2], [0.3]])
     counting = BinnedCounts(np.array(observed), background, loading, treatment)  # type: ignore[arg-type]
-    shape, fixed = np.array([0.5, 0.3, 0.2]), np.array([0.1, 0.0, 0.3])
+    shape = np.array([0.5, 0.3, 0.2])
 
     def log_likelihood(signal: float) -> float:
-        return counting.log_likelihood(signal * shape + fixed)
+        return counting.log_likelihood(signal * shape)
 
     grid = np.linspace(0.0, 60.0 if max(observed) < 100.0 else 4000.0, 3001)
     values = np.array([log_likelihood(signal) for signal in grid])
     density = np.exp(values - values.max())
     cumulative = np.concatenate([[0.0], np.cumsum(0.5 * (density[1:] + density[:-1]))])
     reference = np.interp(0.90, cumulative / cumulative[-1], grid)
-    assert upper_limits.flat_prior(counting, shape, 0.90, fixed) == pytest.approx(reference, rel=2e-3)
+    assert upper_limits.flat_prior(counting, shape, 0.90) == pytest.approx(reference, rel=2e-3)
 
-    limit = upper_limits.likelihood_ratio(counting, shape, 0.90, fixed)
+    limit = upper_limits.likelihood_ratio(counting, shape, 0.90)
     best = optimize.minimize_scalar(lambda s: -log_likelihood(s), bounds=(0.0, limit), method="bounded")
     highest = max(-best.fun, log_likelihood(0.0))
     # Half of the squared one-sided normal quantile at 90 %, 1.642/2.
@@ -180,7 +180,7 @@ def test_published_limit_from_its_own_counts() -> None:
     # discrimination of electrons event by event, which a bare count leaves out.
     from scanfit.likelihoods.direct_detection.experiment import Experiment
     from scanfit.likelihoods.direct_detection.sensitivity import limits, yields
-    from scanfit.likelihoods.direct_detection.spectrum import fold
+    from scanfit.likelihoods.direct_detection.folding import fold
 
     experiment = Experiment.model_validate(
         {
