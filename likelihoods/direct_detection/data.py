@@ -1,9 +1,9 @@
 """What an experiment saw, in the form in which likelihoods are computed.
 
 Both kinds hold expected signal and background in *cells*. For binned counts the cells are the bins. For an event list
-they are one vanishingly narrow bin around each event, with one count, and the rest of the window, with none: the product
-of their Poisson probabilities is the extended likelihood exp(-s-b) prod_i (ds/dE + db/dE)(E_i), up to the widths, whose
-logarithms are added back. So one treatment of uncertain backgrounds serves both.
+they are one vanishingly narrow bin around each event, with one count, and the rest of the window, with none: the
+product of their Poisson probabilities is the extended likelihood exp(-s-b) prod_i (ds/dE + db/dE)(E_i), up to the
+widths, whose logarithms are added back. So one treatment of uncertain backgrounds serves both.
 """
 
 from __future__ import annotations
@@ -21,7 +21,7 @@ from scanfit.priors import FloatArray
 from .acceptance import Acceptance, event_acceptance
 from .counting import BinnedCounts
 from .experiment import Experiment
-from .folding import CountingResponse, cubic_interpolation, fold, fold_spectrum
+from .folding import CountingResponse, cubic_stencil, fold, fold_spectrum
 from .neutrinos import BORON8_FLUX, FLUXES, neutrino_rate
 from .velocity_table import VelocityTable
 
@@ -144,19 +144,19 @@ class EventGrid:
     def holding(self, events: FloatArray) -> EventData:
         """Data of a list of measured energies in keV."""
         low, high = self.energies[0], self.energies[-1]
-        between = _WIDTH * cubic_interpolation((events - low) / (high - low), self.energies.size)
-        matrix = np.concatenate([self.response.matrix[..., :-1] @ between.T, self.response.matrix[..., -1:]], axis=-1)
+        first, weights = cubic_stencil((events - low) / (high - low), self.energies.size)
 
         def cells(densities: FloatArray) -> FloatArray:
-            at_events = np.maximum(densities[..., :-1] @ between.T, 0.0)
+            # Gather four neighbours: a product with a matrix would touch every energy of the grid.
+            at_events = sum(densities[..., first + j] * (_WIDTH * weights[j]) for j in range(4))
             return np.concatenate([at_events, densities[..., -1:]], axis=-1)
 
         observed = np.append(np.ones(events.size), 0.0)
-        counting = BinnedCounts(observed, cells(self.background), self._loading(observed.size), self.treatment)
+        counting = BinnedCounts(observed, np.maximum(cells(self.background), 0.0), self._loading(observed.size), self.treatment)
         return EventData(
-            response=replace(self.response, matrix=np.ascontiguousarray(matrix)),
+            response=replace(self.response, matrix=cells(self.response.matrix)),
             counting=counting,
-            neutrinos=cells(self.neutrinos),
+            neutrinos=np.maximum(cells(self.neutrinos), 0.0),
             offset=-events.size * math.log(_WIDTH),
             grid=self,
         )
@@ -230,10 +230,9 @@ def _densities(seen: Acceptance, spectrum: Callable[[FloatArray], FloatArray]) -
     return np.asarray(spectrum(seen.energy) @ seen.weights)
 
 
-def _neutrinos(
-    experiment: Experiment, seen: Callable[[Callable[[FloatArray], FloatArray]], FloatArray]
-) -> FloatArray:
+def _neutrinos(experiment: Experiment, seen: Callable[[Callable[[FloatArray], FloatArray]], FloatArray]) -> FloatArray:
     """Neutrinos in each cell: boron-8, and all others."""
+
     def rate(name: str) -> FloatArray:
         return seen(lambda energy: neutrino_rate(energy, experiment.target, name))  # type: ignore[arg-type]
 

@@ -67,8 +67,8 @@ class Resolution(Options):
 class Quenching(Options):
     """Share of a recoil's energy that is seen, against the true energy: a table or the formula of Lindhard.
 
-    The formula, for recoils in their own element of charge Z, is Q = k g/(1 + k g) with g = 3 e^0.15 + 0.7 e^0.6 + e and
-    e = 11.5 Z^(-7/3) E/keV (Astropart. Phys. 6 (1996) 87).
+    The formula, for recoils in their own element of charge Z, is Q = k g/(1 + k g) with g = 3 e^0.15 + 0.7 e^0.6 + e
+    and e = 11.5 Z^(-7/3) E/keV (Astropart. Phys. 6 (1996) 87).
     """
 
     energy_kev: tuple[NonNegativeFloat, ...] | None = Field(default=None, min_length=2)

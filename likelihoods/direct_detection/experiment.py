@@ -280,7 +280,7 @@ class Experiment(Options):
         bins, events = info.data.get("bins"), info.data.get("events")
         if uncertainty is None or (bins is None and events is None):
             return uncertainty
-        expected = (events.background,) if events is not None else bins.background
+        expected: tuple[float, ...] = (events.background,) if events is not None else getattr(bins, "background", ())
         reference = expected if bins is not None else (0,)
         other = "bins" if bins is not None else "the one background of [events]"
         if uncertainty.relative is not None and len(uncertainty.relative) > 1:
@@ -326,7 +326,8 @@ class Experiment(Options):
             L in b = background exp(L z); no columns when the background is exact, one when all bins share one
             normalisation. An event list counts as one bin.
         """
-        background = np.array([self.events.background] if self.events is not None else self.bins.background)
+        data = self.bins or self.events
+        background = np.atleast_1d(np.array(data.background if data is not None else (), dtype=float))
         uncertainty = self.background_uncertainty
         if uncertainty is None:
             return np.zeros((background.size, 0))

@@ -23,7 +23,7 @@ from ..constants import SPEED_OF_LIGHT_KM_S
 from .acceptance import Acceptance, acceptance
 from .halo import Halo, maxwellian_norm, mean_inverse_speed, mean_transverse_speed
 from .isotopes import KEV, mass_fractions
-from .spectrum import RATE_UNIT, RESPONSES, coupling_table, nuclear_responses
+from .spectrum import RATE_UNIT, coupling_table, nuclear_responses
 from .spin_dependent import nuclear_spin
 from .velocity_table import VelocityTable
 
@@ -114,7 +114,7 @@ def fold(
     energy = seen.energy
     low, high = energy[0], energy[-1]
     t = np.sqrt((energy - low) / (high - low))
-    interpolation = csr_array(cubic_interpolation(t, nodes).T)
+    interpolation = _interpolation(t, nodes)
     grid = np.linspace(0.0, 1.0, nodes)
     fractions = mass_fractions(experiment.target)
     rows = sum(end - first for first, end, _ in _BLOCKS)
@@ -146,17 +146,23 @@ def fold_spectrum(experiment: Experiment, spectrum: Callable[[FloatArray], Float
     return np.asarray(spectrum(seen.energy) @ seen.weights)
 
 
-def cubic_interpolation(t: FloatArray, nodes: int) -> FloatArray:
-    """Matrix, shape (t.size, nodes), that takes values at uniform nodes of [0, 1] to a local cubic through four."""
+def cubic_stencil(t: FloatArray, nodes: int) -> tuple[NDArray[np.intp], FloatArray]:
+    """First of four neighbouring uniform nodes of [0, 1], and their weights, shape (4, t.size), in a local cubic."""
     place = t * (nodes - 1)
-    first = np.clip(np.floor(place).astype(int) - 1, 0, nodes - 4)
+    first = np.clip(np.floor(place).astype(np.intp) - 1, 0, nodes - 4)
     x = place - first
-    matrix = np.zeros((t.size, nodes))
-    rows = np.arange(t.size)
+    weights = np.empty((4, t.size))
     for j in range(4):
-        others = [i for i in range(4) if i != j]
-        matrix[rows, first + j] = np.prod([(x - i) / (j - i) for i in others], axis=0)
-    return matrix
+        weights[j] = np.prod([(x - i) / (j - i) for i in range(4) if i != j], axis=0)
+    return first, weights
+
+
+def _interpolation(t: FloatArray, nodes: int) -> csr_array:
+    """Matrix, shape (nodes, t.size), that hands each value at `t` on to its four nodes."""
+    first, weights = cubic_stencil(t, nodes)
+    rows = (first[None, :] + np.arange(4)[:, None]).ravel()
+    columns = np.tile(np.arange(t.size), 4)
+    return csr_array((weights.ravel(), (rows, columns)), shape=(nodes, t.size))
 
 
 @njit(cache=True, fastmath=False, error_model="numpy")
@@ -166,7 +172,8 @@ def _from_table(table: FloatArray, step: float, row: int, speed: float) -> float
     index = int(place)
     if index >= table.shape[1] - 1:
         return 0.0
-    return table[row, index] + (place - index) * (table[row, index + 1] - table[row, index])
+    value: float = table[row, index] + (place - index) * (table[row, index + 1] - table[row, index])
+    return value
 
 
 @njit(cache=True, fastmath=False, error_model="numpy")

@@ -147,7 +147,7 @@ def earth_speed_excess(first_day: int, last_day: int) -> float:
     than 0.2 % over the whole year except within a few GeV of the lightest mass that is seen.
     """
     last = last_day + (366 if last_day < first_day else 0)
-    during = earth_speed(np.arange(first_day, last + 1))
+    during = earth_speed(np.arange(first_day, last + 1, dtype=float))
     year = earth_speed(np.linspace(0.0, _DAYS, 1000, endpoint=False))
     return float(during.mean() - year.mean())
 

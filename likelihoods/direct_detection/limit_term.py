@@ -30,10 +30,10 @@ class DirectDetectionLimitOptions(Options):
 class DirectDetectionLimit(Term["Candidate"]):
     """Approximate likelihood of a published limit on scattering off nucleons.
 
-    The ratio x of the candidate's cross section to the excluded one scales with its fraction of the dark matter and with
-    the local density. In the Poisson form the data are a number of events, none as published; in the half-Gaussian form
-    a best fit of x, zero as published. The normalisation is that of these stand-ins, so evidences compare models only
-    among runs with the same curve.
+    The ratio x of the candidate's cross section to the excluded one scales with its fraction of the dark matter and
+    with the local density. In the Poisson form the data are a number of events, none as published; in the half-Gaussian
+    form a best fit of x, zero as published. The normalisation is that of these stand-ins, so evidences compare models
+    only among runs with the same curve.
 
     Parameters
     ----------

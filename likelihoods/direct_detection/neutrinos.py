@@ -2,7 +2,8 @@
 
     d sigma/dT = G_F^2 M/(4 pi) Q_W^2 (1 - M T/(2 E^2)) F^2(T),   Q_W = N - (1 - 4 sin^2 theta_W) Z
 
-with T up to 2 E^2/(M + 2 E) (Phys. Rev. D 9 (1974) 1389), all flavours alike, and the weak mixing angle at low momentum.
+with T up to 2 E^2/(M + 2 E) (Phys. Rev. D 9 (1974) 1389), all flavours alike, and the weak mixing angle at low
+momentum.
 
 Sources:
 
@@ -50,8 +51,8 @@ _GRAMS_PER_GEV: Final = 1.66053907e-24 / ATOMIC_MASS_UNIT
 _BORON8_ENERGIES: Final = np.concatenate([[0.0], np.arange(0.5, 15.6, 0.5), [16.0]])
 _BORON8_DENSITIES: Final = np.array(
     [0.0, 0.00378, 0.01302, 0.02584, 0.04073, 0.05651, 0.07221, 0.08704, 0.10037, 0.11174, 0.12079, 0.12729, 0.13108,
-     0.13216, 0.13056, 0.12642, 0.11997, 0.11147, 0.10126, 0.08973, 0.07731, 0.06446, 0.05167, 0.03943, 0.02824, 0.01854,
-     0.01074, 0.00514, 0.00184, 0.00048, 0.00010, 0.00001, 0.0]
+     0.13216, 0.13056, 0.12642, 0.11997, 0.11147, 0.10126, 0.08973, 0.07731, 0.06446, 0.05167, 0.03943, 0.02824,
+     0.01854, 0.01074, 0.00514, 0.00184, 0.00048, 0.00010, 0.00001, 0.0]
 )  # fmt: skip
 """Per MeV, on a grid of 0.5 MeV."""
 _BORON8_SPECTRUM: Final = PchipInterpolator(_BORON8_ENERGIES, _BORON8_DENSITIES)

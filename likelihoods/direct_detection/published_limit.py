@@ -7,8 +7,8 @@ A curve tells where a likelihood has fallen by a known amount, nothing else, so 
 * ``half-gaussian``: ln L = -(k/2) (sigma/sigma_level)^2, where k is the squared normal quantile of `level`, one-sided
   (1.642 at 90 %) or two-sided (2.706), as `crossing` says.
 
-The two differ by a quarter to a half in the cross section they disfavour as strongly. All that is known to a count, such
-as other recoil spectra and other halo speeds, is lost; only the local density can be rescaled. The file::
+The two differ by a quarter to a half in the cross section they disfavour as strongly. All that is known to a count,
+such as other recoil spectra and other halo speeds, is lost; only the local density can be rescaled. The file::
 
     title  = "..."
     source = "..."                      # the paper

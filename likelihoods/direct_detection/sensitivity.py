@@ -72,9 +72,7 @@ def couplings_of(curve: str, mass: float, cross_section: float) -> NucleonCoupli
     return NucleonCouplings(a_proton=spin) if curve == "sd-proton" else NucleonCouplings(a_neutron=spin)
 
 
-def upper_limit(
-    counting: BinnedCounts, shape: FloatArray, level: float, method: LimitMethod
-) -> float:
+def upper_limit(counting: BinnedCounts, shape: FloatArray, level: float, method: LimitMethod) -> float:
     """Upper limit on the total signal in events; `shape` is the signal in each bin for one event in total.
 
     Raises
@@ -107,9 +105,7 @@ def yields(response: CountingResponse, curve: str, masses: FloatArray, halo: Hal
     return np.array([response.counts(m, couplings_of(curve, m, _UNIT), halo) for m in masses])
 
 
-def limits(
-    counting: BinnedCounts, signal: FloatArray, level: float, method: LimitMethod
-) -> FloatArray:
+def limits(counting: BinnedCounts, signal: FloatArray, level: float, method: LimitMethod) -> FloatArray:
     """Upper limits in cm^2 from `yields`, shape (n_masses,); infinite where no recoil is seen."""
     found = np.full(len(signal), np.inf)
     for index, row in enumerate(signal):

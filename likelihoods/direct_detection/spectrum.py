@@ -6,8 +6,8 @@ The rate per target mass of a nucleus with mass fraction w is
     R_A(E) = (2/pi) [Z f_p + (A-Z) f_n]^2 F^2(E) + 8/(2J+1) [a_0^2 S_00 + a_0 a_1 S_01 + a_1^2 S_11]
 
 where R_A = sigma_A F^2/(2 mu_A^2) does not contain the dark-matter mass. Interactions suppressed by the momentum
-transfer bring further terms with q^2 = 2 m_A E or its square; in those suppressed by velocity zeta (see `halo`) over c^2
-takes the place of eta.
+transfer bring further terms with q^2 = 2 m_A E or its square; in those suppressed by velocity zeta (see `halo`) over
+c^2 takes the place of eta.
 """
 
 from __future__ import annotations
@@ -92,9 +92,8 @@ def nuclear_responses(energy: FloatArray, isotope: Isotope) -> FloatArray:
 
 def amplitudes_squared(isotope: Isotope, couplings: NucleonCouplings) -> FloatArray:
     """Factors of `nuclear_responses`, shape (`RESPONSES`,), of the unsuppressed couplings."""
-    return np.array(_coherent(isotope, couplings.f_proton, couplings.f_neutron)) + np.array(
-        _spins(couplings.a_proton, couplings.a_neutron)
-    )
+    coherent = np.array(_coherent(isotope, couplings.f_proton, couplings.f_neutron))
+    return np.asarray(coherent + np.array(_spins(couplings.a_proton, couplings.a_neutron)))
 
 
 def coupling_table(couplings: NucleonCouplings) -> FloatArray:

@@ -46,8 +46,8 @@ class DirectDetection(Term["Candidate"]):
 
     Spin-independent and spin-dependent scattering with separate proton and neutron couplings, also where suppressed by
     momentum or velocity, in a halo whose parameters are shared with every other term that names them. The signal scales
-    with the candidate's fraction of the dark matter. The background's uncertainty is profiled or marginalised as the run
-    says; the flux of boron-8 neutrinos, where the experiment counts them, is a shared nuisance.
+    with the candidate's fraction of the dark matter. The background's uncertainty is profiled or marginalised as the
+    run says; the flux of boron-8 neutrinos, where the experiment counts them, is a shared nuisance.
 
     Parameters
     ----------
@@ -101,9 +101,7 @@ class DirectDetection(Term["Candidate"]):
         """
         return self._signal_in(self._data.response, candidate, values)
 
-    def _signal_in(
-        self, response: CountingResponse, candidate: Candidate, values: Mapping[str, float]
-    ) -> FloatArray:
+    def _signal_in(self, response: CountingResponse, candidate: Candidate, values: Mapping[str, float]) -> FloatArray:
         if candidate.nucleon is None:
             raise MissingPrediction("scattering on nucleons")
         halo = Halo.from_values(values) if self._maxwellian else Halo(values["local_density"])
@@ -199,7 +197,9 @@ def _caveats(experiment: Experiment) -> tuple[str, ...]:
     if experiment.planned:
         caveats.append(f"{title}: planned, so its counts are the background-only expectation")
     if {"supernovae", "atmospheric"} & set(experiment.neutrinos):
-        caveats.append(f"{title}: supernova and atmospheric neutrinos are rough, good to a factor of two, with fixed fluxes")
+        caveats.append(
+            f"{title}: supernova and atmospheric neutrinos are rough, good to a factor of two, with fixed fluxes"
+        )
     isotopes = mass_fractions(experiment.target)
     if any(nuclear_spin(isotope) > 0.0 for isotope in isotopes):
         caveats.append(

@@ -123,7 +123,7 @@ def _unified_raw(
     # Accepted signals can have holes: every pass looks at the same ones.
     start = 0 if coarse_only is None else max(math.floor(coarse_only / _COARSE) - 2, 0)
     end = end if coarse_only is None else min(end, coarse_only + 1.5)
-    signals = _COARSE * np.arange(start, math.ceil(end / _COARSE))
+    signals = _COARSE * np.arange(start, math.ceil(end / _COARSE), dtype=float)
     inside = signals[_accepted(observed, signals, background, level)]
     if inside.size == 0:
         return 0.0, 0.0

@@ -31,7 +31,9 @@ BANDS = ("expected_2.5", "expected_16", "expected_50", "expected_84", "expected_
 @click.option("--points", default=40, show_default=True, type=click.IntRange(min=2), help="Points of the curve.")
 @click.option("--pseudo-experiments", default=200, show_default=True, type=click.IntRange(min=0), help="0: no bands.")
 @click.option("--seed", default=1, show_default=True, type=click.IntRange(min=0), help="Of the pseudo-experiments.")
-@click.option("--set", "settings", multiple=True, metavar="KEY=VALUE", help="Another key of the term, as in a run file.")
+@click.option(
+    "--set", "settings", multiple=True, metavar="KEY=VALUE", help="Another key of the term, as in a run file."
+)
 @click.option(
     "--inner-nuisances",
     default="marginal",

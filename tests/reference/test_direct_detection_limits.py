@@ -179,8 +179,8 @@ def test_published_limit_from_its_own_counts() -> None:
     # CLs gives 7.9e-47 at 30 GeV, a factor 1.9 above the published 4.1e-47: the paper uses 1.3 t, positions and the
     # discrimination of electrons event by event, which a bare count leaves out.
     from scanfit.likelihoods.direct_detection.experiment import Experiment
-    from scanfit.likelihoods.direct_detection.sensitivity import limits, yields
     from scanfit.likelihoods.direct_detection.folding import fold
+    from scanfit.likelihoods.direct_detection.sensitivity import limits, yields
 
     experiment = Experiment.model_validate(
         {
@@ -219,7 +219,11 @@ cross_section_cm2 = [1e-45, 1e-47, 1e-46]
 
 
 def published(
-    folder: Path, likelihood: str = "poisson", interaction: str = "spin-independent", target: str = "Xe = 1", more: str = ""
+    folder: Path,
+    likelihood: str = "poisson",
+    interaction: str = "spin-independent",
+    target: str = "Xe = 1",
+    more: str = "",
 ) -> DirectDetectionLimit:
     text = CURVE.format(likelihood=likelihood, interaction=interaction, target=target, more=more)
     (folder / "curve.toml").write_text(text, encoding="utf-8")

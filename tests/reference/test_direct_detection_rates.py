@@ -23,8 +23,8 @@ from scanfit.likelihoods.constants import (
     SPEED_OF_LIGHT_KM_S,
 )
 from scanfit.likelihoods.direct_detection.experiment import Experiment
-from scanfit.likelihoods.direct_detection.form_factor import helm_form_factor_squared, helm_radius
 from scanfit.likelihoods.direct_detection.folding import fold
+from scanfit.likelihoods.direct_detection.form_factor import helm_form_factor_squared, helm_radius
 from scanfit.likelihoods.direct_detection.halo import Halo
 from scanfit.likelihoods.direct_detection.isotopes import (
     NATURAL_ABUNDANCES,
