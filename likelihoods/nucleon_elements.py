@@ -7,8 +7,8 @@ Scalar currents: the coupling of the Higgs boson to a nucleon in units of m_N/v 
 with the light and strange sigma terms; the heavy quarks enter through the gluons (Phys. Lett. B 78 (1978) 443). A model
 takes either `HIGGS_NUCLEON_COUPLING` or `SIGMA_TERMS`.
 
-Axial currents: `AXIAL_CHARGES` are those of the proton; for the neutron u and d change places. They are fixed unless the
-run file frees them; hep-ex/0609039 (from memory) measures 0.842 +- 0.012, -0.427 +- 0.013 and -0.085 +- 0.018.
+Axial currents: `AXIAL_CHARGES` are those of the proton; for the neutron u and d change places. They are fixed unless
+the run file frees them; hep-ex/0609039 (from memory) measures 0.842 +- 0.012, -0.427 +- 0.013 and -0.085 +- 0.018.
 """
 
 from __future__ import annotations

@@ -152,7 +152,9 @@ class EventGrid:
             return np.concatenate([at_events, densities[..., -1:]], axis=-1)
 
         observed = np.append(np.ones(events.size), 0.0)
-        counting = BinnedCounts(observed, np.maximum(cells(self.background), 0.0), self._loading(observed.size), self.treatment)
+        counting = BinnedCounts(
+            observed, np.maximum(cells(self.background), 0.0), self._loading(observed.size), self.treatment
+        )
         return EventData(
             response=replace(self.response, matrix=cells(self.response.matrix)),
             counting=counting,

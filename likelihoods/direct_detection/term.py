@@ -168,9 +168,17 @@ class DirectDetection(Term["Candidate"]):
         rng: np.random.Generator | None = None,
     ) -> LimitCurve:
         floor = curve == FLOOR
-        data = build_data(ideal_experiment(self.experiment), self._treatment) if floor else self._data
+        data, caveats = self._data, self.caveats
+        if floor:
+            ideal = ideal_experiment(self.experiment)
+            data = build_data(ideal, self._treatment)
+            caveats = (
+                *(text for text in caveats if not text.endswith("background-only expectation")),
+                "Floor: unit efficiency, perfect resolution, no background but neutrinos of all known sources",
+                _rough_neutrinos(self.experiment.title),
+            )
         return limit_curve(
-            f"{self.experiment.title}: neutrino floor" if floor else self.experiment.title,
+            f"Neutrino floor of {self.experiment.title}" if floor else self.experiment.title,
             data,
             "si" if floor else curve,
             level=USUAL_LEVEL if level is None else level,
@@ -179,7 +187,7 @@ class DirectDetection(Term["Candidate"]):
             rng=rng or np.random.default_rng(1),
             method="flat-prior" if floor else self._limit_method,
             observed=not (floor or self.experiment.planned),
-            caveats=self.caveats,
+            caveats=tuple(dict.fromkeys(caveats)),
         )
 
     def _holding(self, data: Data) -> Self:
@@ -197,9 +205,7 @@ def _caveats(experiment: Experiment) -> tuple[str, ...]:
     if experiment.planned:
         caveats.append(f"{title}: planned, so its counts are the background-only expectation")
     if {"supernovae", "atmospheric"} & set(experiment.neutrinos):
-        caveats.append(
-            f"{title}: supernova and atmospheric neutrinos are rough, good to a factor of two, with fixed fluxes"
-        )
+        caveats.append(_rough_neutrinos(title))
     isotopes = mass_fractions(experiment.target)
     if any(nuclear_spin(isotope) > 0.0 for isotope in isotopes):
         caveats.append(
@@ -209,3 +215,7 @@ def _caveats(experiment: Experiment) -> tuple[str, ...]:
     if unknown:
         caveats.append(f"{title}: spin-dependent scattering on {', '.join(unknown)} is left out")
     return tuple(caveats)
+
+
+def _rough_neutrinos(title: str) -> str:
+    return f"{title}: supernova and atmospheric neutrinos are rough, good to a factor of two"

@@ -29,7 +29,7 @@ def test_everything_is_written(tmp_path: Path) -> None:
     }
     record = json.loads((tmp_path / "out" / "limit_si.json").read_text(encoding="utf-8"))
     assert record["level"] == 0.95
-    lines = [line for line in (tmp_path / "out" / "limit_si.csv").read_text(encoding="utf-8").splitlines()]
+    lines = (tmp_path / "out" / "limit_si.csv").read_text(encoding="utf-8").splitlines()
     assert any(line.startswith("#") and "invented" in line for line in lines)
     rows = list(csv.DictReader(line for line in lines if not line.startswith("#")))
     assert [float(row["observed"]) for row in rows] == pytest.approx(record["observed"], rel=1e-5)

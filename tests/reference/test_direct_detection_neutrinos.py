@@ -11,7 +11,7 @@ from scipy.integrate import quad
 
 from scanfit.contracts import BuildContext
 from scanfit.likelihoods.candidate import Annihilation, Candidate, CosmologyOptions, NucleonCouplings
-from scanfit.likelihoods.constants import FERMI_CONSTANT, GEV_M2_TO_CM2, SIN2_THETA_W_LOW, SIN2_THETA_W_MZ
+from scanfit.likelihoods.constants import FERMI_CONSTANT, GEV_M2_TO_CM2, SIN2_THETA_W_LOW
 from scanfit.likelihoods.direct_detection.halo import Halo
 from scanfit.likelihoods.direct_detection.isotopes import Isotope
 from scanfit.likelihoods.direct_detection.neutrinos import boron8_density, neutrino_rate, weak_charge
@@ -47,7 +47,9 @@ def test_boron8_events_in_xenon(threshold: float, events: float, tolerance: floa
     assert events_above(threshold) == pytest.approx(events, rel=tolerance)
 
 
-@pytest.mark.parametrize(("sin2_weak", "cross_section", "total"), [(0.2312, 1.17e-39, 889.0), (0.2387, 1.22e-39, 928.0)])
+@pytest.mark.parametrize(
+    ("sin2_weak", "cross_section", "total"), [(0.2312, 1.17e-39, 889.0), (0.2387, 1.22e-39, 928.0)]
+)
 def test_cross_section_per_nucleus(sin2_weak: float, cross_section: float, total: float) -> None:
     # arXiv:2408.02877 measures (1.1 +0.8 -0.5)e-39 cm^2 (its abstract); the values are an independent computation.
     nuclei = 1e6 / 131.29 * 6.02214076e23  # in a tonne; standard atomic weight of xenon from memory
@@ -95,8 +97,9 @@ def test_boron8_looks_like_a_light_particle() -> None:
 
 
 def test_rough_sources_have_their_order_of_magnitude() -> None:
-    # arXiv:1802.06039, table of expected backgrounds (from memory): 0.46 atmospheric and 0.05 supernova neutrinos in 15.3
-    # tonne-years at half acceptance between 6 and 30 keV. The sources here are approximations: within a factor of three.
+    # arXiv:1802.06039, table of expected backgrounds (from memory): 0.46 atmospheric and 0.05 supernova neutrinos in
+    # 15.3 tonne-years at half acceptance between 6 and 30 keV. The sources here are approximations: within a factor of
+    # three.
     energy = np.geomspace(6.0, 30.0, 2001)
     for source, published in (("atmospheric", 0.46), ("supernovae", 0.05)):
         found = np.trapezoid(neutrino_rate(energy, XENON, source), energy) * 15.3 * 0.5  # type: ignore[arg-type]
@@ -151,9 +154,7 @@ def test_flux_is_a_shared_nuisance(tmp_path: Path) -> None:
     bins = [at[0] - at[1], at[1] - at[2], at[2]]
     for strength in (4.0, 5.25, 6.0):
         expected = [0.1 + n * strength / 5.25 for n in bins]
-        reference = sum(
-            n * math.log(m) - m - math.lgamma(n + 1.0) for n, m in zip((80, 92, 5), expected, strict=True)
-        )
+        reference = sum(n * math.log(m) - m - math.lgamma(n + 1.0) for n, m in zip((80, 92, 5), expected, strict=True))
         found = term.loglike(candidate(0.0, 6.0), {**VALUES, "boron8_flux": strength})
         assert found == pytest.approx(reference, abs=0.01)
 
@@ -176,8 +177,8 @@ def test_neutrinos_weaken_the_limit_where_they_look_alike(tmp_path: Path) -> Non
 
 
 def test_floor_of_an_exposure(tmp_path: Path) -> None:
-    # Without any background but neutrinos, one tonne-year from 0.7 keV excludes at 6 GeV what boron-8 looks like, and at
-    # 40 GeV, where hardly a neutrino comes, what gives 2.3 events.
+    # Without any background but neutrinos, one tonne-year from 0.7 keV excludes at 6 GeV what boron-8 looks like, and
+    # at 40 GeV, where hardly a neutrino comes, what gives 2.3 events.
     found = detector(tmp_path, 1.0).limit_curve(FLOOR, points=10, pseudo_experiments=15, rng=np.random.default_rng(1))
     assert found.observed is None
     assert found.bands is not None
@@ -187,4 +188,3 @@ def test_floor_of_an_exposure(tmp_path: Path) -> None:
     spectrum = differential_rate(energy, 40.0, couplings_of("si", 40.0, 1e-47), Halo(), XENON)
     background_free = 2.3026 * 1e-47 / np.trapezoid(spectrum, energy)
     assert background_free < median[1] < 2.5 * background_free
-    assert SIN2_THETA_W_MZ < SIN2_THETA_W_LOW

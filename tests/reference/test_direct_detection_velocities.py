@@ -197,8 +197,8 @@ def test_term_with_a_table(tmp_path: Path) -> None:
 
 
 def test_lindhard_factor() -> None:
-    # Astropart. Phys. 6 (1996) 87 formula at 10 keV in germanium with k = 0.157, by hand from the formula (from memory):
-    # e = 11.5 x 32^(-7/3) x 10 = 0.03538, g = 2.2751, Q = 0.263. Measured values lie near 0.25 there.
+    # Formula of Astropart. Phys. 6 (1996) 87 at 10 keV in germanium with k = 0.157, written out once more (from memory).
+    # Measured values lie near 0.25 there (common practice).
     factor = detector(
         target={"Ge": 1.0}, quenching={"lindhard_k": 0.157},
         bins={"intervals_kev": ((2.0, 10.0),), "background": (0.0,), "observed": (0,)},
