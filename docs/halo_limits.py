@@ -41,7 +41,7 @@ def halo(first: float, second: float) -> Halo:
 
 def limits(term: DirectDetection, mass: float) -> tuple[float, float, float]:
     """Limits in cm^2 with the halo fixed, marginalised and profiled; one rule for all three."""
-    response, counting = term._data.response, term.counting
+    response, counting = term.response, term.counting
     nucleon = couplings_of("si", mass, UNIT)
     fixed = response.counts(mass, nucleon, Halo())
     wide, near = (np.array([response.counts(mass, nucleon, halo(x, y)) for x, y in pairs]) for pairs in (WIDE, NEAR))

@@ -91,6 +91,11 @@ class DirectDetection(Term["Candidate"]):
         """Observed counts and background in bins, or in the cells of an event list (see `data`)."""
         return self._data.counting
 
+    @property
+    def response(self) -> CountingResponse:
+        """The folded detector, which gives the signal in the same bins or cells."""
+        return self._data.response
+
     def signal(self, candidate: Candidate, values: Mapping[str, float]) -> FloatArray:
         """Expected signal events in each bin, shape (n_bins,); for an event list see `data`.
 

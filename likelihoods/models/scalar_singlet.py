@@ -59,7 +59,7 @@ class ScalarSinglet(Model[Candidate]):
 
     name = "scalar-singlet"
     summary = "real scalar dark matter that talks to the Standard Model through the Higgs boson"
-    parameters = (
+    parameters: tuple[Parameter, ...] = (
         Parameter("mass", "GeV", "m_S", description="mass of the singlet, 2 GeV or more"),
         Parameter("portal", "", r"\lambda", description="coupling to the Higgs field, (1/2) lambda S^2 |H|^2"),
         HIGGS_NUCLEON_COUPLING,

@@ -197,8 +197,8 @@ def test_term_with_a_table(tmp_path: Path) -> None:
 
 
 def test_lindhard_factor() -> None:
-    # Formula of Astropart. Phys. 6 (1996) 87 at 10 keV in germanium with k = 0.157, written out once more (from memory).
-    # Measured values lie near 0.25 there (common practice).
+    # Formula of Astropart. Phys. 6 (1996) 87 at 10 keV in germanium with k = 0.157, written out once more (from
+    # memory). Measured values lie near 0.25 there (common practice).
     factor = detector(
         target={"Ge": 1.0}, quenching={"lindhard_k": 0.157},
         bins={"intervals_kev": ((2.0, 10.0),), "background": (0.0,), "observed": (0,)},

@@ -110,7 +110,7 @@ def test_pseudo_data_follow_signal_and_background(tmp_path: Path) -> None:
     truth = candidate(2e-46)
     _, total = by_hand(2e-46)
     counts, first = [], []
-    for _ in range(300):
+    for _ in range(120):
         twin = term.simulate(truth, VALUES, rng)
         counts.append(twin.counting.observed.sum())
         first.append(twin.loglike(truth, VALUES) - twin.loglike(candidate(0.0), VALUES))
