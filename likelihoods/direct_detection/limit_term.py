@@ -109,7 +109,7 @@ class DirectDetectionLimit(Term["Candidate"]):
             return (Observable("cross section over the excluded one", math.nan, note="mass outside the curve"),)
         return (
             Observable(
-                f"{self.limit.interaction} cross section on a nucleon times share of the dark matter",
+                f"{self.limit.interaction} cross section on a nucleon, scaled by abundance and density",
                 ratio * (self.limit.at(prediction.mass) or math.nan),
                 limit=self.limit.at(prediction.mass),
                 unit="cm²",
