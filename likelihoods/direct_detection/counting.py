@@ -228,7 +228,9 @@ def _best_nuisances(
         descent = 0.0
         for j in range(n):
             descent -= gradient[j] * step[j]
-        if descent < 1e-18:
+        if descent < 1e-12:
+            # One last full step squares an error that the cost, a large sum, can no longer resolve.
+            nuisances = nuisances + step
             break
         largest = 0.0
         for k in range(n_bins):

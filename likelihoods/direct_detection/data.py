@@ -149,7 +149,7 @@ class EventGrid:
         def cells(densities: FloatArray) -> FloatArray:
             # Gather four neighbours: a product with a matrix would touch every energy of the grid.
             at_events = sum(densities[..., first + j] * (_WIDTH * weights[j]) for j in range(4))
-            return np.concatenate([at_events, densities[..., -1:]], axis=-1)
+            return np.ascontiguousarray(np.concatenate([at_events, densities[..., -1:]], axis=-1))
 
         observed = np.append(np.ones(events.size), 0.0)
         counting = BinnedCounts(

@@ -143,8 +143,9 @@ def earth_speed(day: FloatArray, rotation: float = 238.0) -> FloatArray:
 def earth_speed_excess(first_day: int, last_day: int) -> float:
     """Mean speed between two days of the year, both included, minus the annual mean, in km/s.
 
-    A year's end lies in between when the first day is the larger. The rate is taken at the mean speed: it bends by less
-    than 0.2 % over the whole year except within a few GeV of the lightest mass that is seen.
+    A year's end lies in between when the first day is the larger. The rate is taken at the mean speed. Averaged over a
+    whole year that is exact to 0.2 % above 15 GeV in xenon with a threshold of 4 keV, too low by 0.7 % at 10 GeV and by
+    4 % at 7 GeV, where the rate is steep; over a season the errors are smaller.
     """
     last = last_day + (366 if last_day < first_day else 0)
     during = earth_speed(np.arange(first_day, last + 1, dtype=float))
