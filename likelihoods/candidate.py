@@ -100,16 +100,45 @@ class Annihilation:
 
 
 @dataclass(frozen=True)
+class SuppressedCouplings:
+    """Couplings to nucleons whose amplitude vanishes with the momentum transfer q or the velocity v across it (c = 1).
+
+    `f` multiplies nucleons coherently, `a` multiplies their spins, as in `NucleonCouplings`: the amplitude f there is
+    replaced by f_momentum q, f_velocity v, and a by a_momentum q, a_momentum_squared q^2 or a_velocity v. So scalar
+    interactions with a pseudoscalar dark current give f_momentum, the reverse gives a_momentum, pseudoscalars on both
+    sides give a_momentum_squared, and an axial dark current on vector nucleons gives f_velocity. Rates add without
+    interference. The nuclear form factors are those of the unsuppressed interactions: for `a_momentum` and
+    `a_momentum_squared`, where only the spin along q counts, that is good to a factor of order one (one third of the
+    squared spin at small q is for the model to put into the coupling).
+
+    Momentum in GeV: `*_momentum` are in GeV^-3, `*_momentum_squared` in GeV^-4, `*_velocity` in GeV^-2.
+    """
+
+    f_momentum_proton: float = 0.0
+    f_momentum_neutron: float = 0.0
+    f_velocity_proton: float = 0.0
+    f_velocity_neutron: float = 0.0
+    a_momentum_proton: float = 0.0
+    a_momentum_neutron: float = 0.0
+    a_momentum_squared_proton: float = 0.0
+    a_momentum_squared_neutron: float = 0.0
+    a_velocity_proton: float = 0.0
+    a_velocity_neutron: float = 0.0
+
+
+@dataclass(frozen=True)
 class NucleonCouplings:
     """Effective contact couplings to nucleons in GeV^-2, signs kept.
 
-    Cross sections at zero momentum transfer are sigma_SI = 4 mu^2 f^2/pi and sigma_SD = 12 mu^2 a^2/pi.
+    Cross sections at zero momentum transfer are sigma_SI = 4 mu^2 f^2/pi and sigma_SD = 12 mu^2 a^2/pi. `suppressed`
+    holds interactions that vanish there, if the model has any.
     """
 
     f_proton: float = 0.0
     f_neutron: float = 0.0
     a_proton: float = 0.0
     a_neutron: float = 0.0
+    suppressed: SuppressedCouplings | None = None
 
 
 class Current(NamedTuple):

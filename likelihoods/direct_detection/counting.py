@@ -65,7 +65,7 @@ class BinnedCounts:
     def log_likelihood(self, signal: FloatArray) -> float:
         """Log-likelihood of expected signal counts, shape (n_bins,); -inf where events appear without any source."""
         profile = self.treatment == "profile"
-        value = _log_likelihood(signal, self.background, self.observed, self.loading, profile)
+        value = log_likelihood_of_counts(signal, self.background, self.observed, self.loading, profile)
         return float(value - self._log_factorials)
 
     def most_likely_background(self, signal: FloatArray) -> FloatArray:
@@ -86,10 +86,10 @@ class BinnedCounts:
 
 
 @njit(cache=True, fastmath=False, error_model="numpy")
-def _log_likelihood(
+def log_likelihood_of_counts(
     signal: FloatArray, background: FloatArray, observed: FloatArray, loading: FloatArray, profile: bool
 ) -> float:
-    """Log-likelihood without the factorials."""
+    """Log-likelihood without the factorials; arguments as in `BinnedCounts`."""
     n_nuisances: int = loading.shape[1]
     for k in range(observed.size):
         if observed[k] > 0.0 and signal[k] + background[k] <= 0.0:
@@ -228,7 +228,9 @@ def _best_nuisances(
         descent = 0.0
         for j in range(n):
             descent -= gradient[j] * step[j]
-        if descent < 1e-18:
+        if descent < 1e-12:
+            # One last full step squares an error that the cost, a large sum, can no longer resolve.
+            nuisances = nuisances + step
             break
         largest = 0.0
         for k in range(n_bins):

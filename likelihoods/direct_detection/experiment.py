@@ -5,11 +5,20 @@ Energies are nuclear-recoil energies in keV. Every key::
     title  = "..."                  # what plots and reports call it
     source = "..."                  # where the numbers come from: a paper, a data record, or how they were invented
     invented = true                 # (default false) say it wherever a result shows
-    planned  = true                 # (default false) not built yet: [bins] has no `observed`, and the data are the
+    planned  = true                 # (default false) not built yet: nothing is observed, and the data are the
                                     # background-only expectation
     exposure_tonne_year = 4.0       # positive; a year has 365.25 days
     target = { Xe = 1 }             # numbers of atoms by element (natural abundances) or isotope ("Xe-131"); a
                                     # compound is written as its formula, { Ca = 1, W = 1, O = 4 }
+    observing_days = [60, 210]      # optional; first and last day of the year (1 January is 1) of data taking; past
+                                    # New Year if the first is larger. The Earth's speed follows; else: mean of a year
+    neutrinos = ["boron-8"]         # optional; solar and other neutrinos to add to the background, out of boron-8, hep,
+                                    # supernovae, atmospheric. Leave out what `background` already holds.
+
+    [quenching]                     # optional; then bins, events and resolution are in electron-equivalent keV, which
+    lindhard_k = 0.157              # is the quenching factor times the true energy. This formula needs one element;
+    energy_kev = [1, 100]           # otherwise a table of the factor against true energy, straight lines between. It
+    factor     = [0.15, 0.3]        # must cover the efficiency's table.
 
     [efficiency]                    # probability to keep a recoil, against its true energy; straight lines between
     energy_kev = [3, 6, 60]         # points. It must cover every bin, and is zero outside the table: nothing is
@@ -25,12 +34,21 @@ Energies are nuclear-recoil energies in keV. Every key::
     background    = [1.2, 0.8]          # expected background events in each bin
     observed      = [1, 0]              # events counted
 
+    [events]                        # instead of [bins]: single events and the shape of their background
+    window_kev   = [4, 50]          # measured energies that were looked at
+    energies_kev = [5.1, 17.3]      # one entry an event, all in the window; may be empty
+    background   = 2.4              # expected background events in the window
+    background_shape = { energy_kev = [4, 50], density = [2, 1] }   # optional, else flat; straight lines, any
+                                    # normalisation; it must cover the window
+
     [background_uncertainty]        # optional; without it the background is exact
     relative = 0.2                  # one number for all bins, or one per bin: one standard deviation multiplies or
                                     # divides the expected background by 1 + relative
     absolute = [0.3, 0.2]           # or in events per bin, taken as relative = absolute / background
     correlation = 1.0               # between any two bins, 0 to 1; the default 1 is one shared normalisation
     correlation_matrix = [[1, 0.5], [0.5, 1]]   # or all of them
+
+For events the background's uncertainty is one number, `relative` or `absolute`.
 
 The uncertain backgrounds are log-normal with median `background`: they can never become negative, and agree with a
 Gaussian as long as the uncertainty is small.
@@ -57,58 +75,12 @@ from scanfit.errors import nearest_name
 from scanfit.priors import FloatArray
 from scanfit.validation import Options, check, read_toml
 
-from .isotopes import target_names
+from .detector import Efficiency, Probability, Quenching, Resolution, same_length
+from .halo import earth_speed_excess
+from .isotopes import PROTON_NUMBERS, mass_fractions, target_names
+from .neutrinos import Source
 
-Probability = Annotated[float, Field(ge=0.0, le=1.0)]
-
-
-class Efficiency(Options):
-    """Table of the efficiency against true recoil energy; linear between points, zero outside."""
-
-    energy_kev: tuple[NonNegativeFloat, ...] = Field(min_length=2)
-    value: tuple[Probability, ...]
-
-    @field_validator("energy_kev")
-    @classmethod
-    def _ascending(cls, energies: tuple[float, ...]) -> tuple[float, ...]:
-        for low, high in pairwise(energies):
-            if not low < high:
-                raise ValueError(f"energies must ascend, but {high:g} follows {low:g}")
-        return energies
-
-    @field_validator("value")
-    @classmethod
-    def _one_per_energy(cls, values: tuple[float, ...], info: ValidationInfo) -> tuple[float, ...]:
-        _same_length("value", values, "energy_kev", info.data.get("energy_kev"))
-        return values
-
-    def at(self, energy: FloatArray) -> FloatArray:
-        """Efficiency at true energies in keV."""
-        return np.asarray(np.interp(energy, self.energy_kev, self.value, left=0.0, right=0.0))
-
-    @property
-    def first_accepted(self) -> float:
-        """Energy in keV at which the efficiency begins to differ from zero."""
-        first = next((index for index, value in enumerate(self.value) if value > 0.0), len(self.value) - 1)
-        return self.energy_kev[max(first - 1, 0)]
-
-
-class Resolution(Options):
-    """Width of the Gaussian by which a measured energy differs from the true one."""
-
-    noise_kev: NonNegativeFloat = 0.0
-    stochastic: NonNegativeFloat = 0.0
-    constant: NonNegativeFloat = 0.0
-
-    def width(self, energy: FloatArray) -> FloatArray:
-        """Return sigma(E) in keV."""
-        energy = np.asarray(energy, dtype=float)
-        return np.sqrt(self.noise_kev**2 + self.stochastic**2 * energy + (self.constant * energy) ** 2)
-
-    @property
-    def perfect(self) -> bool:
-        """Whether measured energy is true energy."""
-        return self.noise_kev == self.stochastic == self.constant == 0.0
+DayOfYear = Annotated[int, Field(ge=1, le=366)]
 
 
 class Bins(Options):
@@ -136,7 +108,7 @@ class Bins(Options):
     @classmethod
     def _one_per_bin(cls, values: tuple[float, ...] | None, info: ValidationInfo) -> tuple[float, ...] | None:
         if values is not None:
-            _same_length(info.field_name or "", values, "intervals_kev", info.data.get("intervals_kev"))
+            same_length(info.field_name or "", values, "intervals_kev", info.data.get("intervals_kev"))
         return values
 
 
@@ -176,6 +148,64 @@ class BackgroundUncertainty(Options):
         return self
 
 
+class BackgroundShape(Options):
+    """Relative density of background events against measured energy."""
+
+    energy_kev: tuple[NonNegativeFloat, ...] = Field(min_length=2)
+    density: tuple[NonNegativeFloat, ...]
+
+    @field_validator("density")
+    @classmethod
+    def _positive_somewhere(cls, density: tuple[float, ...], info: ValidationInfo) -> tuple[float, ...]:
+        energies = info.data.get("energy_kev")
+        same_length("density", density, "energy_kev", energies)
+        if max(density) == 0.0:
+            raise ValueError("must not be zero everywhere")
+        if energies is not None and any(low >= high for low, high in pairwise(energies)):
+            raise ValueError("the energies beside it must ascend")
+        return density
+
+
+class Events(Options):
+    """Single events in a window."""
+
+    window_kev: tuple[NonNegativeFloat, NonNegativeFloat]
+    background: NonNegativeFloat
+    background_shape: BackgroundShape | None = None
+    energies_kev: tuple[NonNegativeFloat, ...] | None = None
+
+    @field_validator("window_kev")
+    @classmethod
+    def _has_width(cls, window: tuple[float, float]) -> tuple[float, float]:
+        if not window[0] < window[1]:
+            raise ValueError("the lower end must come first")
+        return window
+
+    @field_validator("background_shape", "energies_kev")
+    @classmethod
+    def _in_window(cls, value: Any, info: ValidationInfo) -> Any:
+        window = info.data.get("window_kev")
+        if value is None or window is None:
+            return value
+        low, high = window
+        if isinstance(value, BackgroundShape):
+            if value.energy_kev[0] > low or value.energy_kev[-1] < high:
+                raise ValueError(f"must cover the window, {low:g} to {high:g} keV")
+        elif any(not low <= energy <= high for energy in value):
+            raise ValueError(f"every event must lie in the window, {low:g} to {high:g} keV")
+        return value
+
+    def background_density(self, energy: FloatArray) -> FloatArray:
+        """Expected background events per keV at measured energies."""
+        low, high = self.window_kev
+        if self.background_shape is None:
+            return np.full(np.shape(energy), self.background / (high - low))
+        shape = self.background_shape
+        cuts = np.unique([low, high, *(e for e in shape.energy_kev if low < e < high)])
+        norm = float(np.trapezoid(np.interp(cuts, shape.energy_kev, shape.density), cuts))
+        return np.asarray(np.interp(energy, shape.energy_kev, shape.density) * self.background / norm)
+
+
 class Experiment(Options):
     """One experiment, checked. Fields are described at the head of this module."""
 
@@ -185,7 +215,11 @@ class Experiment(Options):
     planned: bool = False
     exposure_tonne_year: PositiveFloat
     target: dict[str, PositiveFloat] = Field(min_length=1)
-    bins: Bins
+    observing_days: tuple[DayOfYear, DayOfYear] | None = None
+    neutrinos: tuple[Source, ...] = ()
+    quenching: Quenching | None = None
+    bins: Bins | None = None
+    events: Events | None = None
     efficiency: Efficiency
     resolution: Resolution = Resolution()
     background_uncertainty: BackgroundUncertainty | None = None
@@ -193,52 +227,95 @@ class Experiment(Options):
     @field_validator("target")
     @classmethod
     def _known_nuclei(cls, target: dict[str, float]) -> dict[str, float]:
-        unknown = [name for name in target if name not in target_names()]
-        if unknown:
-            near = [nearest_name(name, target_names()) for name in unknown]
-            hints = [f"{a!r} (did you mean {b!r}?)" if b else repr(a) for a, b in zip(unknown, near, strict=True)]
-            elements = ", ".join(name for name in target_names() if "-" not in name)
-            raise ValueError(f"unknown element or isotope {', '.join(hints)}; elements: {elements}")
-        return target
+        return check_target(target)
 
-    @field_validator("bins")
+    @field_validator("quenching")
     @classmethod
-    def _observed_unless_planned(cls, bins: Bins, info: ValidationInfo) -> Bins:
-        if info.data.get("planned") and bins.observed is not None:
-            raise ValueError("a planned experiment has observed nothing: leave 'observed' out or drop 'planned'")
-        if not info.data.get("planned", True) and bins.observed is None:
-            raise ValueError("'observed' is required unless the experiment is 'planned'")
-        return bins
+    def _one_element(cls, quenching: Quenching | None, info: ValidationInfo) -> Quenching | None:
+        target = info.data.get("target", {})
+        elements = {name.partition("-")[0] for name in target}
+        if quenching is not None and quenching.lindhard_k is not None and len(elements) > 1:
+            raise ValueError("'lindhard_k' describes recoils in one element; give a table for a compound")
+        return quenching
+
+    @field_validator("bins", "events")
+    @classmethod
+    def _observed_unless_planned(cls, data: Bins | Events | None, info: ValidationInfo) -> Bins | Events | None:
+        if data is None:
+            return None
+        name = "observed" if isinstance(data, Bins) else "energies_kev"
+        seen = getattr(data, name) is not None
+        if info.data.get("planned") and seen:
+            raise ValueError(f"a planned experiment has observed nothing: leave {name!r} out or drop 'planned'")
+        if not info.data.get("planned", True) and not seen:
+            raise ValueError(f"{name!r} is required unless the experiment is 'planned'")
+        return data
 
     @field_validator("efficiency")
     @classmethod
     def _covers_bins(cls, efficiency: Efficiency, info: ValidationInfo) -> Efficiency:
-        bins = info.data.get("bins")
-        if bins is not None:
-            low, high = bins.intervals_kev[0][0], bins.intervals_kev[-1][1]
-            first, last = efficiency.energy_kev[0], efficiency.energy_kev[-1]
-            if first > low or last < high:
+        intervals = _intervals(info.data.get("bins"), info.data.get("events"))
+        quenching, target = info.data.get("quenching"), info.data.get("target")
+        if not intervals or target is None:
+            return efficiency
+        first, last = efficiency.energy_kev[0], efficiency.energy_kev[-1]
+        ends = np.array([intervals[0][0], intervals[-1][1]])
+        if quenching is not None and quenching.energy_kev is not None:
+            covered = (quenching.energy_kev[0], quenching.energy_kev[-1])
+            if covered[0] > first or covered[1] < last:
                 raise ValueError(
-                    f"the table must cover every bin, {low:g} to {high:g} keV, but it spans {first:g} to {last:g} keV"
+                    f"the table spans {first:g} to {last:g} keV, but quenching is known from {covered[0]:g} to "
+                    f"{covered[1]:g} keV only"
                 )
+        low, high = _true_energy(ends, quenching, target)
+        if first > low * (1.0 + 1e-6) or last < high * (1.0 - 1e-6):
+            raise ValueError(
+                f"the table must cover every bin, {low:g} to {high:g} keV, but it spans {first:g} to {last:g} keV"
+            )
         return efficiency
 
     @field_validator("background_uncertainty")
     @classmethod
-    def _fits_bins(cls, uncertainty: BackgroundUncertainty, info: ValidationInfo) -> BackgroundUncertainty:
-        bins = info.data.get("bins")
-        if uncertainty is None or bins is None:
+    def _fits_data(cls, uncertainty: BackgroundUncertainty, info: ValidationInfo) -> BackgroundUncertainty:
+        bins, events = info.data.get("bins"), info.data.get("events")
+        if uncertainty is None or (bins is None and events is None):
             return uncertainty
+        expected: tuple[float, ...] = (events.background,) if events is not None else getattr(bins, "background", ())
+        reference = expected if bins is not None else (0,)
+        other = "bins" if bins is not None else "the one background of [events]"
         if uncertainty.relative is not None and len(uncertainty.relative) > 1:
-            _same_length("relative", uncertainty.relative, "bins", bins.intervals_kev)
+            same_length("relative", uncertainty.relative, other, reference)
         if uncertainty.correlation_matrix is not None:
-            _same_length("correlation_matrix", uncertainty.correlation_matrix, "bins", bins.intervals_kev)
+            same_length("correlation_matrix", uncertainty.correlation_matrix, other, reference)
         if uncertainty.absolute is not None:
-            _same_length("absolute", uncertainty.absolute, "bins", bins.intervals_kev)
-            for size, expected in zip(uncertainty.absolute, bins.background, strict=True):
-                if size > 0.0 and expected == 0.0:
+            same_length("absolute", uncertainty.absolute, other, reference)
+            for size, events_expected in zip(uncertainty.absolute, expected, strict=True):
+                if size > 0.0 and events_expected == 0.0:
                     raise ValueError("'absolute' must be 0 in a bin that expects no background")
         return uncertainty
+
+    @model_validator(mode="after")
+    def _one_kind_of_data(self) -> Self:
+        if (self.bins is None) == (self.events is None):
+            raise ValueError("give either [bins] or [events]")
+        return self
+
+    @property
+    def intervals_kev(self) -> tuple[tuple[float, float], ...]:
+        """Bins of measured energy, or the one window of an event list."""
+        return _intervals(self.bins, self.events)
+
+    def visible_energy(self, energy: FloatArray) -> FloatArray:
+        """Mean measured energy, in keV, of recoils of these true energies."""
+        return _visible_energy(np.asarray(energy, dtype=float), self.quenching, self.target)
+
+    def true_energy(self, visible: FloatArray) -> FloatArray:
+        """Inverse of `visible_energy`."""
+        return _true_energy(np.asarray(visible, dtype=float), self.quenching, self.target)
+
+    def extra_earth_speed(self) -> float:
+        """Speed in km/s by which the Earth is faster during data taking than in the mean over a year."""
+        return 0.0 if self.observing_days is None else earth_speed_excess(*self.observing_days)
 
     def background_loading(self) -> FloatArray:
         """Response of each bin's log background to independent standard-normal nuisances.
@@ -247,9 +324,10 @@ class Experiment(Options):
         -------
         ndarray, shape (n_bins, n_nuisances)
             L in b = background exp(L z); no columns when the background is exact, one when all bins share one
-            normalisation.
+            normalisation. An event list counts as one bin.
         """
-        background = np.array(self.bins.background)
+        data = self.bins or self.events
+        background = np.atleast_1d(np.array(data.background if data is not None else (), dtype=float))
         uncertainty = self.background_uncertainty
         if uncertainty is None:
             return np.zeros((background.size, 0))
@@ -279,6 +357,37 @@ def read_experiment(path: Path) -> Experiment:
     return check(Experiment, read_toml(path), source=str(path))
 
 
-def _same_length(name: str, values: tuple[Any, ...], other: str, reference: tuple[Any, ...] | None) -> None:
-    if reference is not None and len(values) != len(reference):
-        raise ValueError(f"{name!r} has {len(values)} entries where {other!r} has {len(reference)}")
+def check_target(target: dict[str, float]) -> dict[str, float]:
+    """Return `target`, or raise ValueError if it names a nucleus that is not known here."""
+    unknown = [name for name in target if name not in target_names()]
+    if unknown:
+        near = [nearest_name(name, target_names()) for name in unknown]
+        hints = [f"{a!r} (did you mean {b!r}?)" if b else repr(a) for a, b in zip(unknown, near, strict=True)]
+        elements = ", ".join(name for name in target_names() if "-" not in name)
+        raise ValueError(f"unknown element or isotope {', '.join(hints)}; elements: {elements}")
+    return target
+
+
+def _intervals(bins: Bins | None, events: Events | None) -> tuple[tuple[float, float], ...]:
+    if bins is not None:
+        return bins.intervals_kev
+    return () if events is None else (events.window_kev,)
+
+
+def _visible_energy(energy: FloatArray, quenching: Quenching | None, target: dict[str, float]) -> FloatArray:
+    if quenching is None:
+        return energy
+    charge = PROTON_NUMBERS[next(iter(mass_fractions(target))).element]
+    return energy * quenching.factor_at(energy, charge)
+
+
+def _true_energy(visible: FloatArray, quenching: Quenching | None, target: dict[str, float]) -> FloatArray:
+    """Invert `_visible_energy`, which rises, by bisection to the last digit."""
+    if quenching is None:
+        return visible
+    low, high = np.zeros_like(visible), 1e3 * np.maximum(visible, 1e-3)
+    for _ in range(80):
+        middle = 0.5 * (low + high)
+        below = _visible_energy(middle, quenching, target) < visible
+        low, high = np.where(below, middle, low), np.where(below, high, middle)
+    return np.asarray(np.where(visible > 0.0, high, 0.0))

@@ -9,11 +9,10 @@ from __future__ import annotations
 import functools
 import math
 from collections.abc import Mapping
-from typing import Final
+from typing import Final, Literal
 
 from scanfit.contracts import BuildContext, Model, Quantity
 from scanfit.errors import PointError
-from scanfit.priors import Normal
 from scanfit.space import Parameter
 
 from ..candidate import (
@@ -33,6 +32,7 @@ from ..higgs_width import (
     higgs_width_on_shell,
     higgs_width_table,
 )
+from ..nucleon_elements import HIGGS_NUCLEON_COUPLING, SIGMA_TERMS, higgs_nucleon_coupling
 from ..relic_abundance.freeze_out import RELIC_FLAGS
 from .higgs_portal_annihilation import PORTAL_CHANNELS, portal_by_channel, portal_total
 
@@ -61,19 +61,15 @@ class ScalarSinglet(Model[Candidate]):
     class Options(CosmologyOptions):
         """Keys of ``[model]``."""
 
+        nucleon: Literal["higgs-coupling", "sigma-terms"] = "higgs-coupling"
+        """Nuisances behind the scattering on nucleons: f_N itself, or the sigma terms that it follows from."""
+
     name = "scalar-singlet"
     summary = "real scalar dark matter that talks to the Standard Model through the Higgs boson"
-    parameters = (
+    parameters: tuple[Parameter, ...] = (
         Parameter("mass", "GeV", "m_S", description="mass of the singlet, 2 GeV or more"),
         Parameter("portal", "", r"\lambda", description="coupling to the Higgs field, (1/2) lambda S^2 |H|^2"),
-        Parameter(
-            "higgs_nucleon_coupling",
-            "",
-            "f_N",
-            Normal(mean=0.308, sigma=0.018),
-            kind="nuisance",
-            description="coupling of the Higgs boson to a nucleon in units of m_N/v, arXiv:1708.02245",
-        ),
+        HIGGS_NUCLEON_COUPLING,
         EQUATION_OF_STATE_SHIFT,
     )
     quantities = (
@@ -97,6 +93,8 @@ class ScalarSinglet(Model[Candidate]):
         self._options = options
         self._table = higgs_width_table()
         self._width = higgs_width_on_shell()
+        if options.nucleon == "sigma-terms":
+            self.parameters = (*(p for p in self.parameters if p is not HIGGS_NUCLEON_COUPLING), *SIGMA_TERMS)
 
     def predict(self, values: Mapping[str, float]) -> Candidate:
         """Predict widths, annihilation and scattering; see `scanfit.contracts.Model.predict`."""
@@ -109,7 +107,7 @@ class ScalarSinglet(Model[Candidate]):
         invisible = higgs_to_singlets_width(mass, portal)
         width = self._width + invisible
         couplings = (mass, portal, width, self._table)
-        contact = portal * float(values["higgs_nucleon_coupling"]) / (4.0 * HIGGS_MASS**2 * mass)
+        contact = portal * higgs_nucleon_coupling(values) / (4.0 * HIGGS_MASS**2 * mass)
         return Candidate(
             mass=mass,
             self_conjugate=True,

@@ -30,6 +30,7 @@ from ..candidate import (
 )
 from ..constants import TAU_MASS, TOP_MASS
 from ..mediator_widths import FERMION_CHANNELS, FERMION_MASSES, spin_one_widths
+from ..nucleon_elements import AXIAL_CHARGES, axial_couplings
 from ..relic_abundance.freeze_out import RELIC_FLAGS
 from .spin_one_annihilation import mediator_pairs, spin_one_by_channel, spin_one_total
 
@@ -45,18 +46,6 @@ _MODEL_PARAMETERS: Final[tuple[Parameter, ...]] = (
     Parameter("g_dark", "", r"g_\chi", description="coupling of the mediator to dark matter"),
     Parameter("g_lepton", "", r"g_\ell", Fixed(value=0.0), description="coupling of the mediator to every lepton"),
     EQUATION_OF_STATE_SHIFT,
-)
-
-_AXIAL_CHARGES: Final = tuple(
-    Parameter(
-        f"delta_{quark}",
-        "",
-        rf"\Delta {quark}",
-        Fixed(value=value),
-        kind="nuisance",
-        description=f"axial charge of the proton carried by {quark} quarks (usual value, from memory)",
-    )
-    for quark, value in (("u", 0.84), ("d", -0.43), ("s", -0.09))
 )
 
 
@@ -100,7 +89,7 @@ class SpinOneMediatorModel(Model[Candidate]):
         self._options = options
         self._axial = options.coupling == "axial"
         if self._axial:
-            self.parameters = (*_MODEL_PARAMETERS, *_AXIAL_CHARGES)
+            self.parameters = (*_MODEL_PARAMETERS, *AXIAL_CHARGES)
 
     def predict(self, values: Mapping[str, float]) -> Candidate:
         """Predict widths, annihilation and scattering; see `scanfit.contracts.Model.predict`."""
@@ -150,9 +139,8 @@ class SpinOneMediatorModel(Model[Candidate]):
         """
         if not self._axial:
             return NucleonCouplings(f_proton=1.5 * contact, f_neutron=1.5 * contact)
-        # With universal couplings exchanging u and d between proton and neutron changes nothing.
-        charge = float(values["delta_u"] + values["delta_d"] + values["delta_s"])
-        return NucleonCouplings(a_proton=0.5 * contact * charge, a_neutron=0.5 * contact * charge)
+        proton, neutron = axial_couplings(values, 0.5 * contact, 0.5 * contact, 0.5 * contact)
+        return NucleonCouplings(a_proton=proton, a_neutron=neutron)
 
     def _flags(self, mediator: SpinOneMediator, mass: float, annihilation: Annihilation) -> dict[str, bool]:
         couplings = (abs(mediator.g_dark), abs(mediator.g_quark), abs(mediator.g_lepton))

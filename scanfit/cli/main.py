@@ -9,6 +9,7 @@ import click
 
 from scanfit import __version__
 from scanfit.cli.inspect import list_plugins, report, status
+from scanfit.cli.limit import limit
 from scanfit.cli.point import check, point
 from scanfit.cli.run import run
 from scanfit.errors import ScanfitError
@@ -32,7 +33,7 @@ def commands() -> None:
     """
 
 
-for _command in (run, check, point, status, report, list_plugins):
+for _command in (run, check, point, limit, status, report, list_plugins):
     commands.add_command(_command)
 
 

@@ -12,8 +12,9 @@ from scipy.special import ndtr
 
 from scanfit.contracts import BuildContext, InnerNuisances
 from scanfit.likelihoods.candidate import Annihilation, Candidate, CosmologyOptions, NucleonCouplings
+from scanfit.likelihoods.direct_detection.folding import NODES, fold
 from scanfit.likelihoods.direct_detection.halo import Halo
-from scanfit.likelihoods.direct_detection.spectrum import NODES, differential_rate, fold
+from scanfit.likelihoods.direct_detection.spectrum import differential_rate
 from scanfit.likelihoods.direct_detection.term import DirectDetection
 
 DEMO = Path(__file__).parents[2] / "runs" / "demo"

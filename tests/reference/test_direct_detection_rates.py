@@ -23,6 +23,7 @@ from scanfit.likelihoods.constants import (
     SPEED_OF_LIGHT_KM_S,
 )
 from scanfit.likelihoods.direct_detection.experiment import Experiment
+from scanfit.likelihoods.direct_detection.folding import fold
 from scanfit.likelihoods.direct_detection.form_factor import helm_form_factor_squared, helm_radius
 from scanfit.likelihoods.direct_detection.halo import Halo
 from scanfit.likelihoods.direct_detection.isotopes import (
@@ -31,7 +32,7 @@ from scanfit.likelihoods.direct_detection.isotopes import (
     mass_fractions,
     natural_isotopes,
 )
-from scanfit.likelihoods.direct_detection.spectrum import differential_rate, fold
+from scanfit.likelihoods.direct_detection.spectrum import differential_rate
 from scanfit.likelihoods.direct_detection.spin_dependent import (
     SPIN_EXPECTATIONS,
     XENON,

@@ -19,8 +19,9 @@ from scanfit.errors import MissingPrediction, PointError
 from scanfit.likelihoods.candidate import Annihilation, Candidate, CosmologyOptions, NucleonCouplings
 from scanfit.likelihoods.constants import GEV_M2_TO_CM2, PROTON_MASS
 from scanfit.likelihoods.direct_detection.experiment import Experiment
+from scanfit.likelihoods.direct_detection.folding import fold
 from scanfit.likelihoods.direct_detection.halo import Halo
-from scanfit.likelihoods.direct_detection.spectrum import differential_rate, fold
+from scanfit.likelihoods.direct_detection.spectrum import differential_rate
 from scanfit.likelihoods.direct_detection.term import DirectDetection
 
 DEMO = Path(__file__).parents[2] / "runs" / "demo"
