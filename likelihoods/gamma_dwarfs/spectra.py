@@ -9,10 +9,10 @@ How good N(> x) is. *Simulation*, median over masses of the stored standard erro
 and 0.5: light and charm quarks 0.3, 1, 1.5, 3; bottom 0.2, 1.6, 3, 6; gluons 0.2, 2.4, 4, 9; tops 0.2, 3.3, 5, 11;
 WW, ZZ, hh, Zh 0.2, 2 to 3, 3 to 4, 5 to 7; leptons 0.6, 0.7, 0.9, 1.4 or less. Above 10 TeV and next to thresholds
 they are two to three times larger. *Interpolation and all*, on eighteen masses kept out of the table: at most 2.5 %
-for 1e-5 < x < 0.05 and 4.5 % at x = 0.1; above, deviations of up to 8 % at x = 0.2 (Zh at 115 GeV 10 %, hh at 160 GeV 16 %) are 1.4 times
-what the errors of table and check together explain. So the aim of 5 % is met up to x = 0.1; up to x = 0.5 the stored
-errors meet it for leptons, light and charm quarks only. Of the photons of bottom quarks one in forty lies above x =
-0.1, one in three hundred above 0.2. Checks: tests/reference/test_gamma_spectra.py.
+for 1e-5 < x < 0.05 and 4.5 % at x = 0.1; above, deviations of up to 8 % at x = 0.2 (Zh at 115 GeV 10 %, hh at
+160 GeV 16 %) are 1.4 times what the errors of table and check together explain. So the aim of 5 % is met up to
+x = 0.1; up to x = 0.5 the stored errors meet it for leptons, light and charm quarks only. Of the photons of bottom
+quarks one in forty lies above x = 0.1, one in three hundred above 0.2. Checks: tests/reference/test_gamma_spectra.py.
 
 Between the kinematic threshold of a channel and the first simulated mass (bb: 4.18 to 5.5 GeV, heavy bosons and
 tops: 0.3 % above threshold) the spectrum of the first simulated mass is used in x. Below threshold a channel

@@ -23,6 +23,10 @@ def start(path: Path, out: Path) -> subprocess.Popen[str]:
     return subprocess.Popen(command, stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True)
 
 
+def count_parts(out: Path) -> int:
+    return sum(1 for _ in out.glob("points/rows-*.parquet"))
+
+
 def slow(toy: Toy, explorer: str) -> Path:
     options = {
         "nested": "live_points = 50",
@@ -45,8 +49,11 @@ def test_killed_runs_end_in_the_same_bytes(toy: Toy, tmp_path: Path, explorer: s
     dice = random.Random(explorer)
     killed = 0
     for _ in range(4):
+        parts = count_parts(broken)
         process = start(path, broken)
-        time.sleep(dice.uniform(1.5, 4.0))
+        while process.poll() is None and count_parts(broken) == parts:
+            time.sleep(0.01)
+        time.sleep(dice.uniform(0.0, 0.4))
         killed += process.poll() is None
         process.kill()
         process.communicate()
