@@ -91,7 +91,7 @@ def invented(run: Run) -> bool:
     caveats = list(run.summary["caveats"])
     for term in run.summary["terms"].values():
         caveats += term.get("caveats", [])
-    return any(caveat.strip().lower().startswith("invented") for caveat in caveats)
+    return any("invented" in caveat.lower() for caveat in caveats)
 
 
 @dataclass(frozen=True)

@@ -116,8 +116,9 @@ def test_simulated_pulls_are_standard_normal() -> None:
 def test_explain() -> None:
     (line,) = term(mode="upper-limit").explain(TOO_LITTLE, {})
     assert line.predicted == TOO_LITTLE.omega_h2
-    assert line.observed == 0.12
-    assert "upper limit" in line.note
+    assert (line.observed, line.limit) == (None, 0.12)
+    (line,) = term().explain(TOO_LITTLE, {})
+    assert (line.observed, line.limit) == (0.12, None)
 
 
 def test_no_abundance_is_a_point_error() -> None:
