@@ -25,7 +25,7 @@ _THRESHOLD_REACH: Final = 8
 class Efficiency(Options):
     """Efficiency against true recoil energy: a table, linear between points and zero outside, or a smooth threshold.
 
-    The threshold is that of a Gaussian-smeared cut, plateau/2 (1 + erf((E - half_at)/(sqrt(2) width))), at any energy E.
+    The threshold is that of a Gaussian-smeared cut, plateau/2 (1 + erf((E - half_at)/(sqrt(2) width))), at any energy.
     """
 
     energy_kev: tuple[NonNegativeFloat, ...] | None = Field(default=None, min_length=2)

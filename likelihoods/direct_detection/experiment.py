@@ -23,8 +23,8 @@ Energies are nuclear-recoil energies in keV. Every key::
     [efficiency]                    # probability to keep a recoil, against its true energy; straight lines between
     energy_kev = [3, 6, 60]         # points. It must cover every bin, and is zero outside the table: nothing is
     value      = [0, 0.8, 0.85]     # extrapolated. Energies ascend, values lie in [0, 1].
-    plateau     = 0.85              # or, instead of the table, plateau/2 (1 + erf((E - half_at)/(sqrt(2) width))) at any
-    half_at_kev = 4.0               # true energy E: plateau in (0, 1], half of it at half_at_kev, and width_kev > 0
+    plateau     = 0.85              # or, instead of that table, plateau/2 (1 + erf((E - half_at)/(sqrt(2) width)))
+    half_at_kev = 4.0               # at any energy E: plateau in (0, 1], half of it at half_at_kev, and width_kev > 0
     width_kev   = 1.2               # the standard deviation of the Gaussian whose integral the threshold is
 
     [resolution]                    # optional; without it measured energy is true energy. Gaussian of width
