@@ -5,6 +5,7 @@ Nothing here touches matplotlib's global settings: figures are drawn and saved i
 
 from __future__ import annotations
 
+import re
 from collections.abc import Iterator, Mapping
 from contextlib import contextmanager
 from types import MappingProxyType
@@ -37,6 +38,9 @@ TERM_COLOURS: Final = ("#E69F00", "#56B4E9", "#CC79A7", "#009E73", "#F0E442", "#
 TERM_HATCHES: Final = ("////", "....", "\\\\\\\\", "xxxx", "----", "||||", "++++", "oooo")
 """Colour and hatch of the terms in their order: the hatch carries the meaning where colour cannot."""
 UNDECIDED_COLOUR: Final = "#E9E9E4"
+
+_SUPERSCRIPTS: Final = "⁻⁰¹²³⁴⁵⁶⁷⁸⁹"
+_LOWERED: Final = str.maketrans(_SUPERSCRIPTS, "-0123456789")
 
 FULL_WIDTH: Final = 7.1
 """Width of a figure across a page, inches."""
@@ -120,13 +124,18 @@ class PlainLogFormatter(LogFormatterSciNotation):
 
 def set_axis(axes: Axes, direction: str, axis: Axis, limits: tuple[float, float] | None = None) -> None:
     """Give one direction ("x" or "y") its scale, label and limits in declared units."""
-    axes.set(**{f"{direction}scale": axis.scale, f"{direction}label": axis.label})
+    axes.set(**{f"{direction}scale": axis.scale, f"{direction}label": _raised(axis.label)})
     if axis.scale == "log":
         side = axes.xaxis if direction == "x" else axes.yaxis
         side.set_major_formatter(PlainLogFormatter())
         side.set_minor_formatter(PlainLogFormatter(labelOnlyBase=False, minor_thresholds=(1.5, 0.5)))
     if limits is not None:
         axes.set(**{f"{direction}lim": limits})
+
+
+def _raised(label: str) -> str:
+    """Superscripts as mathematics: the text font draws ² and ³ bold."""
+    return re.sub(f"[{_SUPERSCRIPTS}]+", lambda found: f"$^{{{found[0].translate(_LOWERED)}}}$", label)
 
 
 def tint(colour: str, strength: float) -> tuple[float, float, float]:

@@ -85,8 +85,8 @@ def _fine_quadrature(experiment: Experiment, intervals: FloatArray) -> tuple[Flo
     # The width grows with the energy: measure it where the margin ends, not where it begins.
     margins = WIDTHS_KEPT * resolution.width(edges + margins)
     lowest, highest = experiment.true_energy(np.array([np.min(edges - margins), np.max(edges + margins)]))
-    low = max(float(lowest), efficiency.first_accepted)
-    high = min(float(highest), efficiency.energy_kev[-1])
+    first, last = experiment.accepted_kev
+    low, high = max(float(lowest), first), min(float(highest), last)
     low = min(low, 0.999 * high)
     steps = np.linspace(-WIDTHS_KEPT, WIDTHS_KEPT, 13)
     around_edges = (edges[:, None] + steps[None, :] * resolution.width(edges)[:, None]).ravel()
@@ -95,7 +95,7 @@ def _fine_quadrature(experiment: Experiment, intervals: FloatArray) -> tuple[Flo
     panels = 200 if narrowest == 0.0 else int(np.clip(2.0 * (high - low) / narrowest, 200, _MOST_PANELS))
     regular = low + (high - low) * np.linspace(0.0, 1.0, panels + 1) ** 2
     bends = experiment.true_energy(np.concatenate([edges, around_edges[around_edges > 0.0]]))
-    cuts = np.concatenate([bends, np.array(efficiency.energy_kev), regular])
+    cuts = np.concatenate([bends, efficiency.bends_kev, regular])
     cuts = np.unique(cuts[(cuts >= low) & (cuts <= high)])
     abscissae, weights = np.polynomial.legendre.leggauss(4)
     half = 0.5 * np.diff(cuts)[:, None]

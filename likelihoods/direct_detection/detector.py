@@ -2,11 +2,13 @@
 
 from __future__ import annotations
 
+import math
 from itertools import pairwise
-from typing import Annotated, Any, Self
+from typing import Annotated, Any, Final, Self
 
 import numpy as np
 from pydantic import Field, NonNegativeFloat, PositiveFloat, ValidationInfo, field_validator, model_validator
+from scipy.special import ndtr
 
 from scanfit.priors import FloatArray
 from scanfit.validation import Options
@@ -14,12 +16,23 @@ from scanfit.validation import Options
 Probability = Annotated[float, Field(ge=0.0, le=1.0)]
 QuenchingFactor = Annotated[float, Field(gt=0.0, le=1.0)]
 
+_TABLE: Final = ("energy_kev", "value")
+_THRESHOLD: Final = ("plateau", "half_at_kev", "width_kev")
+_THRESHOLD_REACH: Final = 8
+"""Widths from its middle at which a threshold has ended: 1e-15 of the plateau is missing, or left."""
+
 
 class Efficiency(Options):
-    """Table of the efficiency against true recoil energy; linear between points, zero outside."""
+    """Efficiency against true recoil energy: a table, linear between points and zero outside, or a smooth threshold.
 
-    energy_kev: tuple[NonNegativeFloat, ...] = Field(min_length=2)
-    value: tuple[Probability, ...]
+    The threshold is that of a Gaussian-smeared cut, plateau/2 (1 + erf((E - half_at)/(sqrt(2) width))), at any energy.
+    """
+
+    energy_kev: tuple[NonNegativeFloat, ...] | None = Field(default=None, min_length=2)
+    value: tuple[Probability, ...] | None = None
+    plateau: Annotated[float, Field(gt=0.0, le=1.0)] | None = None
+    half_at_kev: NonNegativeFloat | None = None
+    width_kev: PositiveFloat | None = None
 
     @field_validator("energy_kev")
     @classmethod
@@ -35,15 +48,49 @@ class Efficiency(Options):
         same_length("value", values, "energy_kev", info.data.get("energy_kev"))
         return values
 
+    @model_validator(mode="after")
+    def _one_way(self) -> Self:
+        given = self.model_fields_set
+        ways = [way for way in (_TABLE, _THRESHOLD) if not given.isdisjoint(way)]
+        if len(ways) != 1 or not given.issuperset(ways[0]):
+            absent = ", ".join(repr(key) for key in ways[0] if key not in given) if len(ways) == 1 else ""
+            missing = f"; missing: {absent}" if absent else ""
+            raise ValueError(
+                "give either a table, 'energy_kev' with 'value', or a formula, 'plateau' with 'half_at_kev' and "
+                f"'width_kev'{missing}"
+            )
+        return self
+
     def at(self, energy: FloatArray) -> FloatArray:
         """Efficiency at true energies in keV."""
-        return np.asarray(np.interp(energy, self.energy_kev, self.value, left=0.0, right=0.0))
+        if self.energy_kev is not None:
+            return np.asarray(np.interp(energy, self.energy_kev, self.value or (), left=0.0, right=0.0))
+        plateau, half_at, width = self._threshold
+        return np.asarray(plateau * ndtr((np.asarray(energy, dtype=float) - half_at) / width))
 
     @property
-    def first_accepted(self) -> float:
-        """Energy in keV at which the efficiency begins to differ from zero."""
-        first = next((index for index, value in enumerate(self.value) if value > 0.0), len(self.value) - 1)
-        return self.energy_kev[max(first - 1, 0)]
+    def range_kev(self) -> tuple[float, float]:
+        """Energies in keV at which the efficiency begins and ceases to differ from zero."""
+        if self.energy_kev is None:
+            _, half_at, width = self._threshold
+            return max(half_at - _THRESHOLD_REACH * width, 0.0), math.inf
+        first = next((index for index, value in enumerate(self.value or ()) if value > 0.0), len(self.energy_kev) - 1)
+        return self.energy_kev[max(first - 1, 0)], self.energy_kev[-1]
+
+    @property
+    def bends_kev(self) -> FloatArray:
+        """Energies in keV between which the efficiency is smooth enough for a few quadrature nodes, shape (n,)."""
+        if self.energy_kev is not None:
+            return np.array(self.energy_kev)
+        _, half_at, width = self._threshold
+        return half_at + width * np.linspace(-_THRESHOLD_REACH, _THRESHOLD_REACH, 2 * _THRESHOLD_REACH + 1)
+
+    @property
+    def _threshold(self) -> tuple[float, float, float]:
+        assert self.plateau is not None  # the schema holds that what is no table is a whole formula
+        assert self.half_at_kev is not None
+        assert self.width_kev is not None
+        return self.plateau, self.half_at_kev, self.width_kev
 
 
 class Resolution(Options):
@@ -96,6 +143,23 @@ class Quenching(Options):
         scaled = 11.5 * np.maximum(energy, 1e-9) * charge ** (-7.0 / 3.0)
         g = 3.0 * scaled**0.15 + 0.7 * scaled**0.6 + scaled
         return np.asarray(self.lindhard_k * g / (1.0 + self.lindhard_k * g))
+
+
+def visible_energy(energy: FloatArray, quenching: Quenching | None, charge: int) -> FloatArray:
+    """Mean measured energy, in keV, of recoils of nuclei of this charge with these true energies."""
+    return energy if quenching is None else energy * quenching.factor_at(energy, charge)
+
+
+def true_energy(visible: FloatArray, quenching: Quenching | None, charge: int) -> FloatArray:
+    """Invert `visible_energy`, which rises, by bisection to the last digit."""
+    if quenching is None:
+        return visible
+    low, high = np.zeros_like(visible), 1e3 * np.maximum(visible, 1e-3)
+    for _ in range(80):
+        middle = 0.5 * (low + high)
+        below = visible_energy(middle, quenching, charge) < visible
+        low, high = np.where(below, middle, low), np.where(below, high, middle)
+    return np.asarray(np.where(visible > 0.0, high, 0.0))
 
 
 def same_length(name: str, values: tuple[Any, ...], other: str, reference: tuple[Any, ...] | None) -> None:

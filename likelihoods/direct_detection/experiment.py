@@ -18,11 +18,14 @@ Energies are nuclear-recoil energies in keV. Every key::
     [quenching]                     # optional; then bins, events and resolution are in electron-equivalent keV, which
     lindhard_k = 0.157              # is the quenching factor times the true energy. This formula needs one element;
     energy_kev = [1, 100]           # otherwise a table of the factor against true energy, straight lines between. It
-    factor     = [0.15, 0.3]        # must cover the efficiency's table.
+    factor     = [0.15, 0.3]        # must cover the efficiency's table; with a formula there, every bin
 
     [efficiency]                    # probability to keep a recoil, against its true energy; straight lines between
     energy_kev = [3, 6, 60]         # points. It must cover every bin, and is zero outside the table: nothing is
     value      = [0, 0.8, 0.85]     # extrapolated. Energies ascend, values lie in [0, 1].
+    plateau     = 0.85              # or, instead of that table, plateau/2 (1 + erf((E - half_at)/(sqrt(2) width)))
+    half_at_kev = 4.0               # at any energy E: plateau in (0, 1], half of it at half_at_kev, and width_kev > 0
+    width_kev   = 1.2               # the standard deviation of the Gaussian whose integral the threshold is
 
     [resolution]                    # optional; without it measured energy is true energy. Gaussian of width
     noise_kev  = 0.2                # sigma(E) = sqrt(noise_kev^2 + stochastic^2 E + (constant E)^2), E in keV, so that
@@ -75,7 +78,7 @@ from scanfit.errors import nearest_name
 from scanfit.priors import FloatArray
 from scanfit.validation import Options, check, read_toml
 
-from .detector import Efficiency, Probability, Quenching, Resolution, same_length
+from .detector import Efficiency, Probability, Quenching, Resolution, same_length, true_energy, visible_energy
 from .halo import earth_speed_excess
 from .isotopes import PROTON_NUMBERS, mass_fractions, target_names
 from .neutrinos import Source
@@ -258,19 +261,24 @@ class Experiment(Options):
         quenching, target = info.data.get("quenching"), info.data.get("target")
         if not intervals or target is None:
             return efficiency
-        first, last = efficiency.energy_kev[0], efficiency.energy_kev[-1]
         ends = np.array([intervals[0][0], intervals[-1][1]])
-        if quenching is not None and quenching.energy_kev is not None:
-            covered = (quenching.energy_kev[0], quenching.energy_kev[-1])
-            if covered[0] > first or covered[1] < last:
+        low, high = true_energy(ends, quenching, _charge(target))
+        known = quenching.energy_kev if quenching is not None else None
+        if efficiency.energy_kev is not None:
+            first, last = efficiency.energy_kev[0], efficiency.energy_kev[-1]
+            if known is not None and (known[0] > first or known[-1] < last):
                 raise ValueError(
-                    f"the table spans {first:g} to {last:g} keV, but quenching is known from {covered[0]:g} to "
-                    f"{covered[1]:g} keV only"
+                    f"the table spans {first:g} to {last:g} keV, but quenching is known from {known[0]:g} to "
+                    f"{known[-1]:g} keV only"
                 )
-        low, high = _true_energy(ends, quenching, target)
-        if first > low * (1.0 + 1e-6) or last < high * (1.0 - 1e-6):
+            if first > low * (1.0 + 1e-6) or last < high * (1.0 - 1e-6):
+                raise ValueError(
+                    f"the table must cover every bin, {low:g} to {high:g} keV, but it spans {first:g} to {last:g} keV"
+                )
+        elif known is not None and (known[0] > low * (1.0 + 1e-6) or known[-1] < high * (1.0 - 1e-6)):
             raise ValueError(
-                f"the table must cover every bin, {low:g} to {high:g} keV, but it spans {first:g} to {last:g} keV"
+                f"quenching must be known in every bin, {low:g} to {high:g} keV, but its table spans {known[0]:g} to "
+                f"{known[-1]:g} keV"
             )
         return efficiency
 
@@ -307,11 +315,18 @@ class Experiment(Options):
 
     def visible_energy(self, energy: FloatArray) -> FloatArray:
         """Mean measured energy, in keV, of recoils of these true energies."""
-        return _visible_energy(np.asarray(energy, dtype=float), self.quenching, self.target)
+        return visible_energy(np.asarray(energy, dtype=float), self.quenching, _charge(self.target))
 
     def true_energy(self, visible: FloatArray) -> FloatArray:
         """Inverse of `visible_energy`."""
-        return _true_energy(np.asarray(visible, dtype=float), self.quenching, self.target)
+        return true_energy(np.asarray(visible, dtype=float), self.quenching, _charge(self.target))
+
+    @property
+    def accepted_kev(self) -> tuple[float, float]:
+        """True energies between which recoils are kept: elsewhere the efficiency is zero, or quenching unknown."""
+        first, last = self.efficiency.range_kev
+        known = self.quenching.energy_kev if self.quenching is not None else None
+        return (first, last) if known is None else (max(first, known[0]), min(last, known[-1]))
 
     def extra_earth_speed(self) -> float:
         """Speed in km/s by which the Earth is faster during data taking than in the mean over a year."""
@@ -374,20 +389,6 @@ def _intervals(bins: Bins | None, events: Events | None) -> tuple[tuple[float, f
     return () if events is None else (events.window_kev,)
 
 
-def _visible_energy(energy: FloatArray, quenching: Quenching | None, target: dict[str, float]) -> FloatArray:
-    if quenching is None:
-        return energy
-    charge = PROTON_NUMBERS[next(iter(mass_fractions(target))).element]
-    return energy * quenching.factor_at(energy, charge)
-
-
-def _true_energy(visible: FloatArray, quenching: Quenching | None, target: dict[str, float]) -> FloatArray:
-    """Invert `_visible_energy`, which rises, by bisection to the last digit."""
-    if quenching is None:
-        return visible
-    low, high = np.zeros_like(visible), 1e3 * np.maximum(visible, 1e-3)
-    for _ in range(80):
-        middle = 0.5 * (low + high)
-        below = _visible_energy(middle, quenching, target) < visible
-        low, high = np.where(below, middle, low), np.where(below, high, middle)
-    return np.asarray(np.where(visible > 0.0, high, 0.0))
+def _charge(target: dict[str, float]) -> int:
+    """Charge of the nuclei of a target; only the quenching of a target of one element asks for it."""
+    return PROTON_NUMBERS[next(iter(mass_fractions(target))).element]

@@ -116,12 +116,13 @@ def limits(counting: BinnedCounts, signal: FloatArray, level: float, method: Lim
 
 
 def mass_range(response: CountingResponse, curve: str, halo: Halo, points: int) -> FloatArray:
-    """Masses in GeV, evenly spaced in the logarithm, from where the experiment begins to see anything to 10 TeV."""
+    """Masses in GeV from where the experiment begins to see anything to 10 TeV, densest at first, where limits fall."""
     trial = np.geomspace(0.2, _HEAVIEST, 300)
     total = yields(response, curve, trial, halo).sum(axis=1)
     if not total.max() > 0.0:
         raise InputError([Problem("curve", "the target has no nuclei with the spin that this curve needs", curve)])
-    return np.geomspace(trial[np.argmax(total > _LIGHTEST_YIELD * total.max())], _HEAVIEST, points)
+    lightest = trial[np.argmax(total > _LIGHTEST_YIELD * total.max())]
+    return np.asarray(lightest * (_HEAVIEST / lightest) ** (np.linspace(0.0, 1.0, points) ** 1.5))
 
 
 def ideal_experiment(experiment: Experiment) -> Experiment:

@@ -9,7 +9,6 @@ from typing import Any, Final
 import numpy as np
 import pandas as pd
 from rich.console import Console
-from rich.markup import escape
 
 from scanfit import plugins
 from scanfit.cli.printing import table
@@ -42,7 +41,7 @@ def print_detail(screen: Console, detail: Detail) -> None:
     screen.print()
     screen.print(table(detail.title, ["", "value", "unit", ""], rows))
     if detail.curves:
-        headings = [escape(f"{item.name} [{item.unit}]") if item.unit else item.name for item, _ in detail.curves]
+        headings = [f"{item.name} [{item.unit}]" if item.unit else item.name for item, _ in detail.curves]
         length = len(detail.curves[0][1])
         spread = np.linspace(0, length - 1, min(length, _MOST_ROWS)).round().astype(int).tolist()
         columns = [values[list(detail.rows or spread)].tolist() for _, values in detail.curves]

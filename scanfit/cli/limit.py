@@ -147,7 +147,9 @@ def _write(curve: LimitCurve, folder: Path, name: str) -> list[Path]:
     stem = folder / f"limit_{name}"
     table_file, record_file = (stem.with_name(stem.name + ending) for ending in (".csv", ".json"))
     text = io.StringIO()
-    for caveat in (curve.title, f"{curve.y.description or curve.y.name}, level {curve.level:g}", *curve.caveats):
+    units = f"{curve.x.name} in {curve.x.unit or 1}, limits in {curve.y.unit or 1}"
+    what = f"{curve.y.description or curve.y.name}, level {curve.level:g}; {units}"
+    for caveat in (curve.title, what, *curve.caveats):
         text.write(f"# {caveat}\n")
     writer = csv.writer(text, lineterminator="\n")
     observed = ["observed"] if curve.observed is not None else []

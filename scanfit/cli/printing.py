@@ -9,6 +9,7 @@ from typing import Any
 
 import click
 from rich.console import Console
+from rich.markup import escape
 from rich.table import Table
 
 _WIDTH_OF_A_FILE = 160
@@ -23,12 +24,15 @@ def number(value: Any) -> str:
 
 def table(title: str, columns: Sequence[str], rows: Sequence[Sequence[Any]]) -> Table:
     """A plain table: first column left, the others right unless they hold words."""
-    made = Table(title=title, title_justify="left", title_style="bold", box=None, pad_edge=False, padding=(0, 2))
+    made = Table(
+        title=escape(title), title_justify="left", title_style="bold", box=None, pad_edge=False, padding=(0, 2)
+    )
     for index, column in enumerate(columns):
         words = index == 0 or any(isinstance(row[index], str) for row in rows)
-        made.add_column(column, justify="left" if words else "right", style=None, header_style="dim")
+        # Brackets hold units here, not styles.
+        made.add_column(escape(column), justify="left" if words else "right", style=None, header_style="dim")
     for row in rows:
-        made.add_row(*(item if isinstance(item, str) else number(item) for item in row))
+        made.add_row(*(escape(item) if isinstance(item, str) else number(item) for item in row))
     return made
 
 

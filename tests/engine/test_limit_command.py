@@ -24,6 +24,8 @@ def test_everything_is_written(tmp_path: Path) -> None:
     result = call(*arguments, "--level", "0.95", "--out", str(tmp_path / "out"))
     assert result.exit_code == 0, result.output
     assert "invented data" in result.output
+    assert "mass [GeV]" in result.output
+    assert "observed [cm²]" in result.output
     assert {path.name for path in (tmp_path / "out").iterdir()} == {
         f"limit_si{ending}" for ending in (".csv", ".json", ".png", ".pdf")
     }
@@ -31,6 +33,7 @@ def test_everything_is_written(tmp_path: Path) -> None:
     assert record["level"] == 0.95
     lines = (tmp_path / "out" / "limit_si.csv").read_text(encoding="utf-8").splitlines()
     assert any(line.startswith("#") and "invented" in line for line in lines)
+    assert any("mass in GeV, limits in cm²" in line for line in lines)
     rows = list(csv.DictReader(line for line in lines if not line.startswith("#")))
     assert [float(row["observed"]) for row in rows] == pytest.approx(record["observed"], rel=1e-5)
     assert [float(row["expected_50"]) for row in rows] == pytest.approx(record["expected_50"], rel=1e-5)
@@ -39,6 +42,24 @@ def test_everything_is_written(tmp_path: Path) -> None:
     assert again.exit_code == 0
     first, second = ((tmp_path / name / "limit_si.csv").read_bytes() for name in ("out", "again"))
     assert first == second
+
+
+def test_event_list_of_the_demo(tmp_path: Path) -> None:
+    arguments = [
+        "direct-detection",
+        str(DEMO / "corrie_argon_events.toml"),
+        "--points",
+        "5",
+        "--pseudo-experiments",
+        "12",
+    ]
+    result = call(*arguments, "--json", "--out", str(tmp_path))
+    assert result.exit_code == 0, result.output
+    record = json.loads(result.output)
+    assert any("invented data" in caveat for caveat in record["caveats"])
+    # Background-only events: the limit lies where limits without a signal do.
+    for mass in range(1, 5):
+        assert 0.5 * record["expected_2.5"][mass] < record["observed"][mass] < 2.0 * record["expected_97.5"][mass]
 
 
 def test_json_of_a_published_curve(tmp_path: Path) -> None:

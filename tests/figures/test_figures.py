@@ -47,8 +47,8 @@ def test_plane_is_labelled(material):
     left, right = figure.axes[:2]
     assert left.get_xscale() == left.get_yscale() == right.get_xscale() == "log"
     found = texts(figure)
-    for expected in (r"$m_\chi$ [GeV]", r"$\sigma^\mathrm{SI}_p$ [cm²]", "68 % credible", "95 % profile", "best fit",
-                     "posterior mean", "credible, ensemble", INVENTED):  # fmt: skip
+    for expected in (r"$m_\chi$ [GeV]", r"$\sigma^\mathrm{SI}_p$ [cm$^{2}$]", "68 % credible", "95 % profile",
+                     "best fit", "posterior mean", "credible, ensemble", INVENTED):  # fmt: skip
         assert expected in found
     assert left.get_xlim() == right.get_xlim()
 

@@ -94,6 +94,27 @@ def test_extended_likelihood(tmp_path: Path, treatment: InnerNuisances, resoluti
         assert term.loglike(candidate(cross_section), VALUES) == pytest.approx(expected, abs=1e-4)
 
 
+@pytest.mark.parametrize("resolution", ["noise_kev = 0.3\nstochastic = 0.2", ""])
+@pytest.mark.parametrize("quenching", ["", "[quenching]\nenergy_kev = [1.0, 45.0]\nfactor = [0.95, 0.95]"])
+@pytest.mark.parametrize("width", [1.2, 0.05])
+def test_signal_behind_a_smooth_threshold(tmp_path: Path, resolution: str, quenching: str, width: float) -> None:
+    """Against a dense sum over true energy; a table of quenching that ends at 45 keV lets no recoil above through."""
+    text = FILE.replace("noise_kev = 0.3\nstochastic = 0.2", resolution)
+    formula = f"plateau = 0.85\nhalf_at_kev = 6.0\nwidth_kev = {width}\n"
+    text = text.replace("energy_kev = [2.0, 6.0, 60.0]\nvalue = [0.1, 0.8, 0.8]\n", formula)
+    term = build(tmp_path, text.replace("[efficiency]", quenching + "\n[efficiency]"))
+    energy = np.linspace(0.5, 45.0 if quenching else 90.0, 200001)
+    rate = differential_rate(energy, 50.0, couplings_of("si", 50.0, 1e-47), Halo(), {"Xe": 1.0})
+    rate = 2.0 * rate * 0.85 * stats.norm.cdf(energy, 6.0, width)
+    seen = energy * (0.95 if quenching else 1.0)
+    if resolution:
+        spread = np.sqrt(0.09 + 0.04 * seen)
+        share = ndtr((40.0 - seen) / spread) - ndtr((4.0 - seen) / spread)
+    else:
+        share = np.asarray((seen >= 4.0) & (seen <= 40.0), dtype=float)
+    assert term.signal(candidate(1e-47), VALUES)[-1] == pytest.approx(np.trapezoid(rate * share, energy), rel=2e-4)
+
+
 def test_no_events_is_a_plain_exponential(tmp_path: Path) -> None:
     text = FILE.replace("[5.0, 9.3, 22.0]", "[]").partition("[background_uncertainty]")[0]
     _, total = by_hand(1e-47)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 import re
 from pathlib import Path
 
@@ -36,6 +37,8 @@ observed = [1, 0]
 [background_uncertainty]
 relative = 0.2
 """
+
+TABLE = "energy_kev = [3.0, 6.0, 40.0]\nvalue = [0.0, 0.8, 0.85]"
 
 BROKEN = {
     "efficiency above one": (
@@ -95,6 +98,47 @@ BROKEN = {
     "no counts": ("observed = [1, 0]", "", r"bins: 'observed' is required unless the experiment is 'planned'"),
     "planned with counts": ("exposure", "planned = true\nexposure", r"bins: a planned experiment has observed nothing"),
     "misspelt key": ("noise_kev", "noise_keV", r"resolution\.noise_keV: unknown key; did you mean 'noise_kev'\?"),
+    "two efficiencies": (
+        "value = [0.0, 0.8, 0.85]",
+        "value = [0.0, 0.8, 0.85]\nplateau = 0.8\nhalf_at_kev = 4.0\nwidth_kev = 1.0",
+        r"efficiency: give either a table, 'energy_kev' with 'value', or a formula, 'plateau' with",
+    ),
+    "half a table": (
+        "value = [0.0, 0.8, 0.85]",
+        "",
+        r"efficiency: give either a table.*; missing: 'value'$",
+    ),
+    "half a formula": (
+        TABLE,
+        "half_at_kev = 4.0",
+        r"efficiency: give either a table.*; missing: 'plateau', 'width_kev'$",
+    ),
+    "plateau above one": (
+        TABLE,
+        "plateau = 1.1\nhalf_at_kev = 4.0\nwidth_kev = 1.0",
+        r"efficiency\.plateau: must be less than or equal to 1 \(given: 1\.1\)",
+    ),
+    "no plateau": (
+        TABLE,
+        "plateau = 0.0\nhalf_at_kev = 4.0\nwidth_kev = 1.0",
+        r"efficiency\.plateau: must be greater than 0",
+    ),
+    "threshold without width": (
+        TABLE,
+        "plateau = 0.8\nhalf_at_kev = 4.0\nwidth_kev = 0.0",
+        r"efficiency\.width_kev: must be greater than 0",
+    ),
+    "negative threshold": (
+        TABLE,
+        "plateau = 0.8\nhalf_at_kev = -4.0\nwidth_kev = 1.0",
+        r"efficiency\.half_at_kev: must be greater than or equal to 0",
+    ),
+    "formula where quenching is unknown": (
+        "[efficiency]\n" + TABLE,
+        "[quenching]\nenergy_kev = [1, 50]\nfactor = [0.2, 0.25]\n"
+        "[efficiency]\nplateau = 0.8\nhalf_at_kev = 4.0\nwidth_kev = 1.0",
+        r"efficiency: quenching must be known in every bin, .* to 56 keV, but its table spans 1 to 50 keV",
+    ),
     "missing table": (
         "[efficiency]\nenergy_kev = [3.0, 6.0, 40.0]\nvalue = [0.0, 0.8, 0.85]",
         "",
@@ -165,7 +209,31 @@ def test_efficiency_is_linear_and_never_extrapolated() -> None:
     np.testing.assert_allclose(
         efficiency.at(np.array([2.9, 3.0, 4.5, 6.0, 40.0, 40.1])), [0.0, 0.0, 0.4, 0.8, 0.85, 0.0], atol=1e-15
     )
-    assert efficiency.first_accepted == 3.0
+    assert efficiency.range_kev == (3.0, 40.0)
+
+
+def test_efficiency_by_formula_is_an_error_function() -> None:
+    efficiency = Efficiency(plateau=0.85, half_at_kev=4.0, width_kev=1.2)
+    energies = np.array([0.0, 2.0, 4.0, 5.2, 9.0, 500.0])
+    by_definition = [0.425 * (1.0 + math.erf((energy - 4.0) / (math.sqrt(2.0) * 1.2))) for energy in energies]
+    np.testing.assert_allclose(efficiency.at(energies), by_definition, rtol=1e-12)
+    assert efficiency.range_kev == (0.0, math.inf)
+    assert Efficiency(plateau=0.85, half_at_kev=40.0, width_kev=1.0).range_kev[0] == 32.0
+
+
+def test_demo_events_are_drawn_as_they_say() -> None:
+    corrie = read_experiment(DEMO / "corrie_argon_events.toml")
+    events = corrie.events
+    assert events is not None
+    assert events.background_shape is not None
+    assert "default_rng(20261202)" in corrie.source
+    rng = np.random.default_rng(20261202)
+    count = rng.poisson(events.background)
+    energies, heights = rng.uniform(40.0, 140.0, 1000), rng.uniform(0.0, 3.0, 1000)
+    shape = events.background_shape
+    kept = energies[heights < np.interp(energies, shape.energy_kev, shape.density)]
+    assert events.energies_kev == tuple(sorted(np.round(kept[:count], 1).tolist()))
+    assert events.window_kev == (40.0, 140.0)
 
 
 def test_resolution_adds_in_quadrature() -> None:
@@ -206,7 +274,7 @@ def test_demo_counts_are_drawn_as_they_say() -> None:
     assert corrie.bins.observed == tuple(np.random.default_rng(20261201).poisson(corrie.bins.background).tolist())
 
 
-@pytest.mark.parametrize("name", ["corrie_xenon.toml", "corrie_2_xenon.toml"])
+@pytest.mark.parametrize("name", ["corrie_xenon.toml", "corrie_2_xenon.toml", "corrie_argon_events.toml"])
 def test_demo_says_that_it_is_invented(name: str) -> None:
     term = DirectDetection(DirectDetection.Options(data=name), BuildContext(DEMO))
     assert any("invented data, not a measurement" in caveat for caveat in term.caveats)
