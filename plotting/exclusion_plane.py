@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import textwrap
 from pathlib import Path
 from typing import Final
 
@@ -18,6 +19,9 @@ from .style import COLOURS, figure_style, new_figure, tint
 
 _SMALLEST: Final = 1e-8
 """CLs below which nothing more is to be seen; keeps the logarithm finite."""
+
+_LINE_OF_NOTES: Final = 94
+"""Characters that fit across the figure."""
 
 
 def write_exclusion_plane(plane: ExclusionPlane, stem: Path, level: float = 0.95) -> list[Path]:
@@ -46,11 +50,10 @@ def write_exclusion_plane(plane: ExclusionPlane, stem: Path, level: float = 0.95
 
 def draw_exclusion_plane(plane: ExclusionPlane, stem: Path, level: float = 0.95) -> list[Path]:
     """Draw the observed line (solid, excluded side shaded) and the median expected one (dashed)."""
-    invented = any("invented" in text for text in (plane.title, *plane.caveats))
-    footnote = "Invented data. " if invented else ""
-    footnote += f"Large-sample CLs of this search alone; {plane.fixed}."
+    notes = (f"CLs of this search alone; {plane.fixed}", *plane.caveats)
+    lines = [line for note in notes for line in textwrap.wrap(note, _LINE_OF_NOTES)]
     with figure_style():
-        figure = new_figure(5.2, 4.1, footnote)
+        figure = new_figure(5.2, 4.0 + 0.125 * len(lines), "\n".join(lines))
         axes = figure.add_subplot()
         colour = COLOURS["profile"]
         observed, expected = (_excess(values, level) for values in (plane.observed, plane.expected))
@@ -79,7 +82,8 @@ def draw_exclusion_plane(plane: ExclusionPlane, stem: Path, level: float = 0.95)
         axes.set_ylim(plane.y_values[0], plane.y_values[-1])
         axes.set_title(plane.title)
         if handles:
-            axes.legend(handles=handles, title=f"excluded at {100 * level:g} %", loc="upper left", alignment="left")
+            axes.legend(handles=handles, title=f"excluded at {100 * level:g} %", alignment="left",
+                        loc=_emptier_corner(observed), frameon=True, edgecolor="none")  # fmt: skip
         png, pdf = (stem.with_name(f"{stem.name}.{kind}") for kind in ("png", "pdf"))
         # Neither date nor version: equal results are equal bytes.
         figure.savefig(png, metadata={"Software": None})
@@ -94,6 +98,13 @@ def _excess(confidence: FloatArray, level: float) -> FloatArray:
 
 def _crosses(excess: FloatArray) -> bool:
     return bool(np.nanmin(excess) < 0.0 < np.nanmax(excess)) if not np.isnan(excess).all() else False
+
+
+def _emptier_corner(excess: FloatArray) -> str:
+    """Place of the legend: the corner of the two off the diagonal in which less is excluded."""
+    rows, columns = (size // 2 for size in excess.shape)
+    upper_left, lower_right = (excess[rows:, :columns] > 0.0).mean(), (excess[:rows, columns:] > 0.0).mean()
+    return "upper left" if upper_left <= lower_right else "lower right"
 
 
 def _on_shell_line(axes: Axes, plane: ExclusionPlane) -> None:

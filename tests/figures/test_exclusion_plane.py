@@ -22,7 +22,7 @@ def plane(observed: np.ndarray, title="Brackwater ring (invented)") -> Exclusion
         y_values=np.linspace(10.0, 900.0, 10),
         observed=observed,
         expected=observed**0.8,
-        caveats=("a caveat",),
+        caveats=("a caveat: invented data",),
     )
 
 
@@ -46,9 +46,9 @@ def test_table_and_figure_are_written_and_say_what_they_show(tmp_path, monkeypat
     table = pd.read_csv(paths[0], comment="#")
     assert list(table.columns) == ["mediator_mass", "mass", "cls_observed", "cls_expected"]
     np.testing.assert_allclose(table.cls_observed, confidence.ravel())
-    assert "# a caveat" in paths[0].read_text(encoding="utf-8")
+    assert "# a caveat: invented data" in paths[0].read_text(encoding="utf-8")
     text = [t.get_text() for t in made[0].texts]
-    assert any(t.startswith("Invented data.") for t in text)
+    assert sorted(text) == ["CLs of this search alone; vector couplings, g_quark = 0.25", "a caveat: invented data"]
     legend = made[0].axes[0].get_legend()
     assert [t.get_text() for t in legend.get_texts()] == ["observed", "expected, median"]
     assert legend.get_title().get_text() == "excluded at 95 %"
