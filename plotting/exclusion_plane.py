@@ -1,4 +1,4 @@
-"""What one collider search alone excludes in the plane of two masses: figure and table."""
+"""What one collider search alone excludes in a plane, as a figure."""
 
 from __future__ import annotations
 
@@ -7,7 +7,6 @@ from pathlib import Path
 from typing import Final
 
 import numpy as np
-import pandas as pd
 from matplotlib.axes import Axes
 from matplotlib.lines import Line2D
 from matplotlib.patches import Patch
@@ -24,32 +23,23 @@ _LINE_OF_NOTES: Final = 94
 """Characters that fit across the figure."""
 
 
-def write_exclusion_plane(plane: ExclusionPlane, stem: Path, level: float = 0.95) -> list[Path]:
-    """Write the plane as table and figure.
+def draw_exclusion_plane(plane: ExclusionPlane, stem: Path, level: float = 0.95) -> list[Path]:
+    """Draw the observed line (solid, excluded side shaded) and the median expected one (dashed); save PNG and PDF.
 
     Parameters
     ----------
     plane : ExclusionPlane
         What to show.
     stem : Path
-        Of the files; ``.csv``, ``.png`` and ``.pdf`` are added.
+        Of the files; ``.png`` and ``.pdf`` are added.
     level : float
-        Confidence level of the lines that are drawn; the table holds CLs at every point.
+        Confidence level of the lines.
 
     Returns
     -------
     list of Path
         The files.
     """
-    table = stem.with_name(f"{stem.name}.csv")
-    with table.open("w", encoding="utf-8") as file:
-        file.write("".join(f"# {line}\n" for line in (plane.title, plane.fixed, *plane.caveats)))
-        pd.DataFrame(plane.table()).to_csv(file, index=False)
-    return [table, *draw_exclusion_plane(plane, stem, level)]
-
-
-def draw_exclusion_plane(plane: ExclusionPlane, stem: Path, level: float = 0.95) -> list[Path]:
-    """Draw the observed line (solid, excluded side shaded) and the median expected one (dashed)."""
     notes = (f"CLs of this search alone; {plane.fixed}", *plane.caveats)
     lines = [line for note in notes for line in textwrap.wrap(note, _LINE_OF_NOTES)]
     with figure_style():
@@ -68,8 +58,9 @@ def draw_exclusion_plane(plane: ExclusionPlane, stem: Path, level: float = 0.95)
             handles.append(
                 Line2D([], [], color=COLOURS["mark"], linestyle="--", linewidth=1.3, label="expected, median")
             )
-        if not handles:
-            axes.text(0.5, 0.5, f"nothing on this plane is excluded at {100 * level:g} %", ha="center",
+        if not _crosses(observed):
+            much = "everything" if np.nanmax(observed, initial=-np.inf) > 0.0 else "nothing"
+            axes.text(0.5, 0.5, f"{much} on this plane is excluded at {100 * level:g} %", ha="center",
                       transform=axes.transAxes)  # fmt: skip
         if np.isnan(plane.observed).any():
             axes.contourf(plane.x_values, plane.y_values, np.isnan(plane.observed).astype(float),

@@ -76,7 +76,7 @@ def limit(
 
     Example: scanfit limit direct-detection runs/demo/corrie_xenon.toml --curve si
 
-    Example of a plane: scanfit limit mono-x runs/demo/brackwater_mono_jet.toml --plane axial --with g_quark=0.25 --with g_dark=1
+    Of a plane: scanfit limit mono-x runs/demo/brackwater_mono_jet.toml --plane axial --with g_quark=0.25
     """
     if plane is not None and curve is not None:
         raise InputError([Problem("--plane", "cannot be combined with --curve", plane)], "limit")
