@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import textwrap
 from pathlib import Path
-from typing import Final
+from typing import Final, Literal
 
 import numpy as np
 from matplotlib.axes import Axes
@@ -48,8 +48,9 @@ def draw_exclusion_plane(plane: ExclusionPlane, stem: Path, level: float = 0.95)
         colour = COLOURS["profile"]
         observed, expected = (_excess(values, level) for values in (plane.observed, plane.expected))
         handles: list[Line2D | Patch] = []
-        if _crosses(observed):
+        if np.any(observed > 0.0):
             axes.contourf(plane.x_values, plane.y_values, observed, levels=[0.0, np.inf], colors=[tint(colour, 0.18)])
+        if _crosses(observed):
             axes.contour(plane.x_values, plane.y_values, observed, levels=[0.0], colors=[colour], linewidths=1.8)
             handles.append(Line2D([], [], color=colour, linewidth=1.8, label="observed"))
         if _crosses(expected):
@@ -59,7 +60,7 @@ def draw_exclusion_plane(plane: ExclusionPlane, stem: Path, level: float = 0.95)
                 Line2D([], [], color=COLOURS["mark"], linestyle="--", linewidth=1.3, label="expected, median")
             )
         if not _crosses(observed):
-            much = "everything" if np.nanmax(observed, initial=-np.inf) > 0.0 else "nothing"
+            much = "everything" if np.any(observed > 0.0) else "nothing"
             axes.text(0.5, 0.5, f"{much} on this plane is excluded at {100 * level:g} %", ha="center",
                       transform=axes.transAxes)  # fmt: skip
         if np.isnan(plane.observed).any():
@@ -91,7 +92,7 @@ def _crosses(excess: FloatArray) -> bool:
     return bool(np.nanmin(excess) < 0.0 < np.nanmax(excess)) if not np.isnan(excess).all() else False
 
 
-def _emptier_corner(excess: FloatArray) -> str:
+def _emptier_corner(excess: FloatArray) -> Literal["upper left", "lower right"]:
     """Place of the legend: the corner of the two off the diagonal in which less is excluded."""
     rows, columns = (size // 2 for size in excess.shape)
     upper_left, lower_right = (excess[rows:, :columns] > 0.0).mean(), (excess[:rows, columns:] > 0.0).mean()

@@ -47,11 +47,11 @@ def limit_figure(curve: LimitCurve) -> Figure:
     lines = [line for caveat in curve.caveats for line in textwrap.wrap(caveat, _LINE_OF_CAVEATS)]
     figure = new_figure(FULL_WIDTH, 4.4 + 0.125 * len(lines), "\n".join(lines))
     axes = figure.subplots()
-    x, colour = curve.x_values, COLOURS["posterior"]
+    x, colour, window = curve.x_values, COLOURS["posterior"], _window(curve)
     if curve.bands is not None:
         median = np.where(np.isfinite(curve.bands[:, 2]), curve.bands[:, 2], np.nan)
         # Edges that become infinite leave the figure at its top.
-        edges = np.minimum(curve.bands, 10.0 * np.max(curve.bands, where=np.isfinite(curve.bands), initial=0.0)).T
+        edges = np.minimum(curve.bands, 10.0 * window[1] if window else 1.0).T
         axes.fill_between(x, edges[0], edges[4], color=tint(colour, 0.22), linewidth=0.0, label="expected, 95 %")
         axes.fill_between(x, edges[1], edges[3], color=tint(colour, 0.5), linewidth=0.0, label="expected, 68 %")
         axes.plot(x, median, color=colour, linestyle="--", label="expected, median")
@@ -59,7 +59,7 @@ def limit_figure(curve: LimitCurve) -> Figure:
         observed = np.where(np.isfinite(curve.observed), curve.observed, np.nan)
         axes.plot(x, observed, color=COLOURS["mark"], linewidth=1.8, label="observed")
     set_axis(axes, "x", _axis(curve.x), (float(x.min()), float(x.max())))
-    set_axis(axes, "y", _axis(curve.y), _window(curve))
+    set_axis(axes, "y", _axis(curve.y), window)
     parts = curve.title.split(": ", 1) if len(curve.title) > _LINE_OF_TITLE else [curve.title]
     axes.set_title("\n".join(textwrap.fill(part, _LINE_OF_TITLE) for part in parts))
     axes.legend(loc="best", title=f"upper limits at {100.0 * curve.level:g} %", alignment="left")

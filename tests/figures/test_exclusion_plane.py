@@ -55,6 +55,8 @@ def test_a_plane_without_a_line_says_so_and_gaps_are_hatched(tmp_path, monkeypat
     assert "nothing on this plane is excluded at 95 %" in [t.get_text() for t in made[0].axes[0].texts]
     draw_exclusion_plane(plane(np.full_like(confidence, 0.001)), tmp_path / "all")
     assert "everything on this plane is excluded at 95 %" in [t.get_text() for t in made[1].axes[0].texts]
+    draw_exclusion_plane(plane(np.full_like(confidence, np.nan)), tmp_path / "refused")
+    made.pop()
     confidence[:, :3] = np.nan
     draw_exclusion_plane(plane(confidence), tmp_path / "gaps")
     assert "not covered" in [t.get_text() for t in made[2].axes[0].get_legend().get_texts()]
