@@ -3,16 +3,42 @@
 from __future__ import annotations
 
 import math
-from typing import Literal, Protocol
+from collections.abc import Mapping
+from types import MappingProxyType
+from typing import Annotated, Any, Final, Literal, Protocol
 
 import numpy as np
+from pydantic import Field, PositiveFloat
 
 from scanfit.contracts import ExclusionPlane, Quantity
-from scanfit.errors import PointError
+from scanfit.errors import InputError, PointError, Problem
 from scanfit.priors import FloatArray
+from scanfit.validation import Options, check
 
 from .candidate import Annihilation, Candidate, SpinOneMediator
 from .mediator_widths import spin_one_total_width
+
+Coupling = Annotated[float, Field(ge=0.0, le=math.sqrt(4.0 * math.pi))]
+
+MASS_PLANES: Final = MappingProxyType(
+    {
+        "vector": "mediator mass and dark-matter mass, vector couplings held fixed",
+        "axial": "mediator mass and dark-matter mass, axial couplings held fixed",
+    }
+)
+"""Planes of a term that looks for a spin-one mediator."""
+
+
+class MassPlaneOptions(Options):
+    """What can be said about a plane of masses; dark matter is a Dirac fermion."""
+
+    g_quark: Coupling = 0.25
+    g_dark: Coupling = 1.0
+    g_lepton: Coupling = 0.0
+    mediator_mass: tuple[PositiveFloat, PositiveFloat] | None = None
+    """Range in GeV; what the search covers when left out."""
+    dark_mass: tuple[PositiveFloat, PositiveFloat] | None = None
+    """Range in GeV; up to 0.55 of the heaviest mediator when left out."""
 
 
 class Excludes(Protocol):
@@ -38,6 +64,56 @@ def spin_one_candidate(
     mediator = SpinOneMediator(mediator_mass, width, coupling, g_quark, g_dark, g_lepton)
     nothing = Annihilation(channels=(), sigma_v=lambda s: np.zeros((0, len(s))), total=np.zeros_like)
     return Candidate(dark_mass, False, 2, nothing, mediator=mediator)
+
+
+def mass_plane(
+    term: Excludes,
+    title: str,
+    plane: str,
+    settings: Mapping[str, Any],
+    covered: tuple[float, float],
+    points: int,
+) -> ExclusionPlane:
+    """Compute one of `MASS_PLANES` as the user's settings say.
+
+    Parameters
+    ----------
+    term, title
+        As in `exclusion_plane`.
+    plane : str
+        One of `MASS_PLANES`.
+    settings : mapping
+        Keys of `MassPlaneOptions`.
+    covered : tuple of float
+        Mediator masses that the search covers, GeV.
+    points : int
+        Points along each axis.
+
+    Raises
+    ------
+    InputError
+        If a setting breaks a rule.
+    """
+    options = check(MassPlaneOptions, settings, source=f"plane {plane}")
+    mediator_range = options.mediator_mass or covered
+    dark_range = options.dark_mass or (min(1.0, 0.01 * mediator_range[1]), 0.55 * mediator_range[1])
+    problems = [
+        Problem(key, "the range must rise", given)
+        for key, given in (("mediator_mass", mediator_range), ("dark_mass", dark_range))
+        if not given[0] < given[1]
+    ]
+    if problems:
+        raise InputError(problems, f"plane {plane}")
+    return exclusion_plane(
+        term,
+        title,
+        np.linspace(*mediator_range, points),
+        np.linspace(*dark_range, points),
+        "axial" if plane == "axial" else "vector",
+        options.g_quark,
+        options.g_dark,
+        options.g_lepton,
+    )
 
 
 def exclusion_plane(

@@ -1,12 +1,12 @@
-"""What one collider search alone excludes in the plane of two masses: figure and table."""
+"""What one collider search alone excludes in a plane, as a figure."""
 
 from __future__ import annotations
 
+import textwrap
 from pathlib import Path
-from typing import Final
+from typing import Final, Literal
 
 import numpy as np
-import pandas as pd
 from matplotlib.axes import Axes
 from matplotlib.lines import Line2D
 from matplotlib.patches import Patch
@@ -19,44 +19,38 @@ from .style import COLOURS, figure_style, new_figure, tint
 _SMALLEST: Final = 1e-8
 """CLs below which nothing more is to be seen; keeps the logarithm finite."""
 
+_LINE_OF_NOTES: Final = 94
+"""Characters that fit across the figure."""
 
-def write_exclusion_plane(plane: ExclusionPlane, stem: Path, level: float = 0.95) -> list[Path]:
-    """Write the plane as table and figure.
+
+def draw_exclusion_plane(plane: ExclusionPlane, stem: Path, level: float = 0.95) -> list[Path]:
+    """Draw the observed line (solid, excluded side shaded) and the median expected one (dashed); save PNG and PDF.
 
     Parameters
     ----------
     plane : ExclusionPlane
         What to show.
     stem : Path
-        Of the files; ``.csv``, ``.png`` and ``.pdf`` are added.
+        Of the files; ``.png`` and ``.pdf`` are added.
     level : float
-        Confidence level of the lines that are drawn; the table holds CLs at every point.
+        Confidence level of the lines.
 
     Returns
     -------
     list of Path
         The files.
     """
-    table = stem.with_name(f"{stem.name}.csv")
-    with table.open("w", encoding="utf-8") as file:
-        file.write("".join(f"# {line}\n" for line in (plane.title, plane.fixed, *plane.caveats)))
-        pd.DataFrame(plane.table()).to_csv(file, index=False)
-    return [table, *draw_exclusion_plane(plane, stem, level)]
-
-
-def draw_exclusion_plane(plane: ExclusionPlane, stem: Path, level: float = 0.95) -> list[Path]:
-    """Draw the observed line (solid, excluded side shaded) and the median expected one (dashed)."""
-    invented = any("invented" in text for text in (plane.title, *plane.caveats))
-    footnote = "Invented data. " if invented else ""
-    footnote += f"Large-sample CLs of this search alone; {plane.fixed}."
+    notes = (f"CLs of this search alone; {plane.fixed}", *plane.caveats)
+    lines = [line for note in notes for line in textwrap.wrap(note, _LINE_OF_NOTES)]
     with figure_style():
-        figure = new_figure(5.2, 4.1, footnote)
+        figure = new_figure(5.2, 4.0 + 0.125 * len(lines), "\n".join(lines))
         axes = figure.add_subplot()
         colour = COLOURS["profile"]
         observed, expected = (_excess(values, level) for values in (plane.observed, plane.expected))
         handles: list[Line2D | Patch] = []
-        if _crosses(observed):
+        if np.any(observed > 0.0):
             axes.contourf(plane.x_values, plane.y_values, observed, levels=[0.0, np.inf], colors=[tint(colour, 0.18)])
+        if _crosses(observed):
             axes.contour(plane.x_values, plane.y_values, observed, levels=[0.0], colors=[colour], linewidths=1.8)
             handles.append(Line2D([], [], color=colour, linewidth=1.8, label="observed"))
         if _crosses(expected):
@@ -65,8 +59,9 @@ def draw_exclusion_plane(plane: ExclusionPlane, stem: Path, level: float = 0.95)
             handles.append(
                 Line2D([], [], color=COLOURS["mark"], linestyle="--", linewidth=1.3, label="expected, median")
             )
-        if not handles:
-            axes.text(0.5, 0.5, f"nothing on this plane is excluded at {100 * level:g} %", ha="center",
+        if not _crosses(observed):
+            much = "everything" if np.any(observed > 0.0) else "nothing"
+            axes.text(0.5, 0.5, f"{much} on this plane is excluded at {100 * level:g} %", ha="center",
                       transform=axes.transAxes)  # fmt: skip
         if np.isnan(plane.observed).any():
             axes.contourf(plane.x_values, plane.y_values, np.isnan(plane.observed).astype(float),
@@ -79,7 +74,8 @@ def draw_exclusion_plane(plane: ExclusionPlane, stem: Path, level: float = 0.95)
         axes.set_ylim(plane.y_values[0], plane.y_values[-1])
         axes.set_title(plane.title)
         if handles:
-            axes.legend(handles=handles, title=f"excluded at {100 * level:g} %", loc="upper left", alignment="left")
+            axes.legend(handles=handles, title=f"excluded at {100 * level:g} %", alignment="left",
+                        loc=_emptier_corner(observed), frameon=True, edgecolor="none")  # fmt: skip
         png, pdf = (stem.with_name(f"{stem.name}.{kind}") for kind in ("png", "pdf"))
         # Neither date nor version: equal results are equal bytes.
         figure.savefig(png, metadata={"Software": None})
@@ -94,6 +90,13 @@ def _excess(confidence: FloatArray, level: float) -> FloatArray:
 
 def _crosses(excess: FloatArray) -> bool:
     return bool(np.nanmin(excess) < 0.0 < np.nanmax(excess)) if not np.isnan(excess).all() else False
+
+
+def _emptier_corner(excess: FloatArray) -> Literal["upper left", "lower right"]:
+    """Place of the legend: the corner of the two off the diagonal in which less is excluded."""
+    rows, columns = (size // 2 for size in excess.shape)
+    upper_left, lower_right = (excess[rows:, :columns] > 0.0).mean(), (excess[:rows, columns:] > 0.0).mean()
+    return "upper left" if upper_left <= lower_right else "lower right"
 
 
 def _on_shell_line(axes: Axes, plane: ExclusionPlane) -> None:

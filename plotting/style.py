@@ -101,16 +101,20 @@ def new_figure(width: float, height: float, footnote: str = "", **spacing: float
     width, height : float
         Inches.
     footnote : str
-        Small print at the bottom: what a reader of the bare figure must know.
+        Small print at the bottom, of one or more lines: what a reader of the bare figure must know.
     spacing : float
         Keywords of matplotlib's `ConstrainedLayoutEngine`.
     """
-    strip = 0.17 / height if footnote else 0.0
+    lines = footnote.splitlines()
+    strip = (0.045 + 0.125 * len(lines)) / height if lines else 0.0
     options: dict[str, Any] = {"rect": (0.0, strip, 1.0, 1.0 - strip), **spacing}
     engine = ConstrainedLayoutEngine(**options)
     figure = Figure(figsize=(width, height), layout=engine)
-    if footnote:
-        figure.text(0.012, 0.05 / height, footnote, fontsize=7.5, style="italic", color=COLOURS["warning"], va="bottom")
+    for number, line in enumerate(reversed(lines)):
+        figure.text(
+            0.012, (0.05 + 0.125 * number) / height, line,
+            fontsize=7.5, style="italic", color=COLOURS["warning"], va="bottom",
+        )  # fmt: skip
     return figure
 
 

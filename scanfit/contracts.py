@@ -234,6 +234,8 @@ class Term(ABC, Generic[PredictionT]):
     """Every file the term read; they are part of the run's fingerprint."""
     curves: ClassVar[Mapping[str, str]] = {}
     """Names of the upper limits that the term can draw alone, each with one line that describes it."""
+    planes: ClassVar[Mapping[str, str]] = {}
+    """Names of the planes in which the term knows alone what it excludes, each with one line that describes it."""
 
     @abstractmethod
     def __init__(self, options: Any, context: BuildContext) -> None: ...
@@ -290,6 +292,25 @@ class Term(ABC, Generic[PredictionT]):
             If the term has no curve of this name.
         """
         raise InputError([Problem("curve", f"{self.name} has no limit curve of this name", curve, tuple(self.curves))])
+
+    def exclusion_plane(self, plane: str, settings: Mapping[str, Any], *, points: int = 40) -> ExclusionPlane:
+        """Return what this search alone excludes in a plane.
+
+        Parameters
+        ----------
+        plane : str
+            One of `planes`.
+        settings : mapping
+            What the user says about the plane (values held fixed, ranges), unchecked; the term knows the keys.
+        points : int
+            Points along each axis.
+
+        Raises
+        ------
+        InputError
+            If the term has no plane of this name, or a setting breaks a rule.
+        """
+        raise InputError([Problem("plane", f"{self.name} has no plane of this name", plane, tuple(self.planes))])
 
 
 class Evaluate(Protocol):

@@ -43,7 +43,7 @@ def read_toml(path: Path) -> dict[str, Any]:
     """
     try:
         with path.open("rb") as file:
-            return {key: _freeze(value) for key, value in tomllib.load(file).items()}
+            return {key: freeze(value) for key, value in tomllib.load(file).items()}
     except OSError as error:
         raise InputError([Problem("", f"the file cannot be read: {error.strerror}")], str(path)) from None
     except (tomllib.TOMLDecodeError, UnicodeDecodeError) as error:
@@ -121,9 +121,10 @@ def _schema_at(schema: type[BaseModel], location: tuple[int | str, ...]) -> type
     return schema
 
 
-def _freeze(value: Any) -> Any:
+def freeze(value: Any) -> Any:
+    """Turn lists into tuples, at every depth."""
     if isinstance(value, list):
-        return tuple(_freeze(item) for item in value)
+        return tuple(freeze(item) for item in value)
     if isinstance(value, dict):
-        return {key: _freeze(item) for key, item in value.items()}
+        return {key: freeze(item) for key, item in value.items()}
     return value

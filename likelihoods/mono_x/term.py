@@ -11,12 +11,13 @@ from typing import Annotated, Any, ClassVar, Final, Protocol, Self
 import numpy as np
 from pydantic import Field, PositiveFloat
 
-from scanfit.contracts import BuildContext, LimitCurve, Observable, Term
+from scanfit.contracts import BuildContext, ExclusionPlane, LimitCurve, Observable, Term
 from scanfit.errors import InputError, MissingPrediction, PointError, Problem
 from scanfit.priors import FloatArray
 from scanfit.validation import Options as BaseOptions
 
 from ..candidate import Candidate, SpinOneMediator
+from ..exclusion_plane import MASS_PLANES, mass_plane
 from .analysis import read_analysis, read_background
 from .histfactory import HistFactoryLikelihood
 from .limits import confidence, coupling_curve
@@ -27,6 +28,8 @@ from .simplified_likelihood import SimplifiedLikelihood
 FB_PER_PB: Final = 1000.0
 SHOWER_FACTOR: Final = 1.12
 """Of the parton shower on the leading order: 1.07 to 1.14 with the generator of the tables."""
+PLANE_MASSES: Final = (50.0, 3000.0)
+"""Mediator masses of a plane in GeV, unless the analysis or the user says otherwise."""
 
 SPIN_ZERO: Final = (
     "mono-x production of anything but a spin-one mediator: a spin-zero one comes from gluons through a top loop, "
@@ -79,9 +82,10 @@ class MonoX(Term[Candidate]):
     summary: ClassVar[str] = "collider search for dark matter recoiling against a jet or photon, in correlated bins"
     cost: ClassVar[float] = 0.2
     curves: ClassVar[Mapping[str, str]] = {
-        "vector": "quark coupling against mediator mass: vector couplings, g_dark = 1, light dark matter",
-        "axial": "quark coupling against mediator mass: axial couplings, g_dark = 1, light dark matter",
+        "vector": "quark coupling against mediator mass; vector couplings, g_dark = 1, light dark matter",
+        "axial": "quark coupling against mediator mass; axial couplings, g_dark = 1, light dark matter",
     }
+    planes: ClassVar[Mapping[str, str]] = MASS_PLANES
 
     def __init__(self, options: Options, context: BuildContext) -> None:
         self.options = options
@@ -205,6 +209,13 @@ class MonoX(Term[Candidate]):
         if not pseudo_experiments:
             result["bands"] = None
         return LimitCurve(title=f"{self.analysis.title}: {self.curves[curve]}", caveats=self.caveats, **result)
+
+    def exclusion_plane(self, plane: str, settings: Mapping[str, Any], *, points: int = 40) -> ExclusionPlane:
+        """Plane of mediator mass and dark-matter mass; `settings` are keys of `MassPlaneOptions`."""
+        if plane not in self.planes:
+            return super().exclusion_plane(plane, settings)
+        low, high = self.analysis.validity.mediator_mass or PLANE_MASSES
+        return mass_plane(self, self.analysis.title, plane, settings, (max(low, PLANE_MASSES[0]), high), points)
 
     def _read_likelihood(self, path: Path) -> tuple[Counts, tuple[Path, ...]]:
         analysis = self.analysis

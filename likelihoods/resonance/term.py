@@ -11,12 +11,13 @@ from typing import Annotated, Any, ClassVar, Final, Self
 import numpy as np
 from pydantic import Field, PositiveFloat
 
-from scanfit.contracts import BuildContext, LimitCurve, Observable, Quantity, Term
+from scanfit.contracts import BuildContext, ExclusionPlane, LimitCurve, Observable, Quantity, Term
 from scanfit.errors import InputError, MissingPrediction, PointError, Problem
 from scanfit.priors import FloatArray
 from scanfit.validation import Options as BaseOptions
 
 from ..candidate import Candidate, SpinOneMediator
+from ..exclusion_plane import MASS_PLANES, mass_plane
 from ..limit_statistics import confidence_from_ratios, limits_expected, upper_limit
 from ..mediator_widths import FERMION_CHANNELS, spin_one_widths
 from .limit_table import LimitTable
@@ -57,6 +58,7 @@ class ResonanceSearch(Term[Candidate]):
         "cross-section": "cross section x branching fraction of a narrow resonance against its mass",
         "coupling": "coupling against mediator mass, with dark matter too heavy to be produced",
     }
+    planes: ClassVar[Mapping[str, str]] = MASS_PLANES
 
     def __init__(self, options: Options, context: BuildContext) -> None:
         self.options = options
@@ -175,8 +177,7 @@ class ResonanceSearch(Term[Candidate]):
             return super().limit_curve(curve)
         file = self.table.file
         level = file.level if level is None else level
-        low = max(self.table.mass[0], self._production.lightest)
-        masses = np.geomspace(low, min(self.table.mass[-1], self._production.heaviest), points)
+        masses = np.geomspace(*self._covered, points)
         limits = np.array([self._limits_at(float(mass), curve, level) for mass in masses])
         if curve == "cross-section":
             y = Quantity("cross_section", "pb", r"\sigma \times \mathrm{BR}", "cross section x branching fraction")
@@ -193,6 +194,20 @@ class ResonanceSearch(Term[Candidate]):
             bands=limits[:, 1:] if self.table.has_expected and pseudo_experiments else None,
             caveats=(*self.caveats, *((f"coupled to {which}",) if curve == "coupling" else ())),
         )
+
+    def exclusion_plane(self, plane: str, settings: Mapping[str, Any], *, points: int = 40) -> ExclusionPlane:
+        """Plane of mediator mass and dark-matter mass; `settings` are keys of `MassPlaneOptions`."""
+        if plane not in self.planes:
+            return super().exclusion_plane(plane, settings)
+        if self.leptonic and not settings.get("g_lepton"):
+            raise InputError([Problem("g_lepton", "must be given: without it there are no leptons to see")])
+        return mass_plane(self, self.table.file.title, plane, settings, self._covered, points)
+
+    @property
+    def _covered(self) -> tuple[float, float]:
+        """Masses in GeV that limits and production both know."""
+        low, high = float(self.table.mass[0]), float(self.table.mass[-1])
+        return max(low, self._production.lightest), min(high, self._production.heaviest)
 
     def _limits_at(self, mass: float, curve: str, level: float) -> FloatArray:
         """Observed limit and its expected quantiles, shape (6,); infinite where no coupling in range is excluded."""

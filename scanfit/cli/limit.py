@@ -15,20 +15,29 @@ import numpy as np
 
 from scanfit.cli.printing import console, print_json, table
 from scanfit.errors import InputError, Problem
+from scanfit.validation import freeze
 
 if TYPE_CHECKING:
+    from rich.table import Table
+
     from scanfit.contracts import InnerNuisances, LimitCurve, Term
 
 BANDS = ("expected_2.5", "expected_16", "expected_50", "expected_84", "expected_97.5")
 """Columns of the expected limits: quantiles in per cent."""
+PLANE_LEVEL = 0.95
+"""Confidence level at which planes are drawn by default."""
 
 
 @click.command()
 @click.argument("term")
 @click.argument("data", type=click.Path(path_type=Path))
 @click.option("--curve", help="Which limit; the term's first when not given.")
+@click.option("--plane", help="Instead of a curve: what is excluded in a plane of two quantities.")
+@click.option(
+    "--with", "held", multiple=True, metavar="KEY=VALUE", help="A coupling held fixed in the plane, or a range of it."
+)
 @click.option("--level", type=click.FloatRange(0.5, 0.9999), help="Confidence level; what the field quotes by default.")
-@click.option("--points", default=40, show_default=True, type=click.IntRange(min=2), help="Points of the curve.")
+@click.option("--points", default=40, show_default=True, type=click.IntRange(min=2), help="Points along each axis.")
 @click.option("--pseudo-experiments", default=200, show_default=True, type=click.IntRange(min=0), help="0: no bands.")
 @click.option("--seed", default=1, show_default=True, type=click.IntRange(min=0), help="Of the pseudo-experiments.")
 @click.option(
@@ -47,6 +56,8 @@ def limit(
     term: str,
     data: Path,
     curve: str | None,
+    plane: str | None,
+    held: tuple[str, ...],
     level: float | None,
     points: int,
     pseudo_experiments: int,
@@ -61,25 +72,54 @@ def limit(
     Writes a table (CSV and JSON) and a figure (PNG and PDF): the observed upper limit, and the median and the 68 and
     95 % bands of limits expected without a signal.
 
+    With --plane, what is excluded where two quantities vary and the couplings are held.
+
     Example: scanfit limit direct-detection runs/demo/corrie_xenon.toml --curve si
+
+    Of a plane: scanfit limit mono-x runs/demo/brackwater_mono_jet.toml --plane axial --with g_quark=0.25
     """
+    if plane is not None and curve is not None:
+        raise InputError([Problem("--plane", "cannot be combined with --curve", plane)], "limit")
+    if held and plane is None:
+        raise InputError([Problem("--with", "belongs to a --plane", held[0])], "limit")
     built = _build(term, data, settings, inner_nuisances)
+    folder = out if out is not None else Path("results") / "limits" / data.stem
+    if plane is not None:
+        _plane(built, plane, held, points, PLANE_LEVEL if level is None else level, folder, as_json)
+        return
     if not built.curves:
         raise InputError([Problem("TERM", f"{term} draws no limit alone", term)], "limit")
     name = curve if curve is not None else next(iter(built.curves))
     found = built.limit_curve(
         name, level=level, points=points, pseudo_experiments=pseudo_experiments, rng=np.random.default_rng(seed)
     )
-    folder = out if out is not None else Path("results") / "limits" / data.stem
     written = _write(found, folder, name)
     if as_json:
         print_json({**_record(found), "files": [str(path) for path in written]})
         return
+    shown = table(f"{found.title}: upper limits at {100 * found.level:g} %", _header(found), _rows(found))
+    _show(shown, found.caveats, written)
+
+
+def _plane(
+    built: Term[Any], name: str, held: Sequence[str], points: int, level: float, folder: Path, as_json: bool
+) -> None:
+    from scanfit.cli.exclusion import plane_record, plane_table, write_plane
+
+    found = built.exclusion_plane(name, _parsed(held, "--with"), points=points)
+    written = write_plane(found, folder, name, level)
+    if as_json:
+        print_json({**plane_record(found, level), "files": [str(path) for path in written]})
+    else:
+        _show(plane_table(found, level), found.caveats, written)
+
+
+def _show(shown: Table, caveats: Sequence[str], files: Sequence[Path]) -> None:
     screen = console()
-    screen.print(table(f"{found.title}: upper limits at {100 * found.level:g} %", _header(found), _rows(found)))
-    for caveat in found.caveats:
+    screen.print(shown)
+    for caveat in caveats:
         screen.print(f"Note: {caveat}", highlight=False, soft_wrap=True)
-    for path in written:
+    for path in files:
         screen.print(str(path), highlight=False, soft_wrap=True)
 
 
@@ -89,20 +129,20 @@ def _build(name: str, data: Path, settings: Sequence[str], inner_nuisances: Inne
     from scanfit.validation import check
 
     kind = find("terms", name, Path(), "TERM")
-    options = check(kind.Options, {"data": data.name, **_parsed(settings)}, source=f"limit {name}")
+    options = check(kind.Options, {"data": data.name, **_parsed(settings, "--set")}, source=f"limit {name}")
     built: Term[Any] = kind(options, BuildContext(data.parent, inner_nuisances))
     return built
 
 
-def _parsed(settings: Sequence[str]) -> dict[str, Any]:
+def _parsed(settings: Sequence[str], option: str) -> dict[str, Any]:
     """Values as TOML; what is not TOML is text."""
     found: dict[str, Any] = {}
     for setting in settings:
         key, equals, value = setting.partition("=")
         if not equals or not key.isidentifier():
-            raise InputError([Problem("--set", "must be written KEY=VALUE", setting)], "limit")
+            raise InputError([Problem(option, "must be written KEY=VALUE", setting)], "limit")
         try:
-            found[key] = tomllib.loads(f"value = {value}")["value"]
+            found[key] = freeze(tomllib.loads(f"value = {value}")["value"])
         except tomllib.TOMLDecodeError:
             found[key] = value
     return found

@@ -1,14 +1,13 @@
-"""The plane that one search alone excludes: what the figure and its table say."""
+"""The plane that one search alone excludes: what the figure says."""
 
 from __future__ import annotations
 
 import numpy as np
-import pandas as pd
 import pytest
 
 from scanfit.contracts import ExclusionPlane, Quantity
 from scanfit.plotting import exclusion_plane as drawing
-from scanfit.plotting.exclusion_plane import draw_exclusion_plane, write_exclusion_plane
+from scanfit.plotting.exclusion_plane import draw_exclusion_plane
 from scanfit.plotting.style import new_figure
 
 
@@ -22,7 +21,7 @@ def plane(observed: np.ndarray, title="Brackwater ring (invented)") -> Exclusion
         y_values=np.linspace(10.0, 900.0, 10),
         observed=observed,
         expected=observed**0.8,
-        caveats=("a caveat",),
+        caveats=("a caveat: invented data",),
     )
 
 
@@ -38,26 +37,26 @@ def figures(monkeypatch) -> list:
     return made
 
 
-def test_table_and_figure_are_written_and_say_what_they_show(tmp_path, monkeypatch, confidence):
+def test_the_figure_is_written_and_says_what_it_shows(tmp_path, monkeypatch, confidence):
     made = figures(monkeypatch)
-    paths = write_exclusion_plane(plane(confidence), tmp_path / "plane")
-    assert [path.suffix for path in paths] == [".csv", ".png", ".pdf"]
+    paths = draw_exclusion_plane(plane(confidence), tmp_path / "plane")
+    assert [path.suffix for path in paths] == [".png", ".pdf"]
     assert all(path.stat().st_size > 0 for path in paths)
-    table = pd.read_csv(paths[0], comment="#")
-    assert list(table.columns) == ["mediator_mass", "mass", "cls_observed", "cls_expected"]
-    np.testing.assert_allclose(table.cls_observed, confidence.ravel())
-    assert "# a caveat" in paths[0].read_text(encoding="utf-8")
     text = [t.get_text() for t in made[0].texts]
-    assert any(t.startswith("Invented data.") for t in text)
+    assert sorted(text) == ["CLs of this search alone; vector couplings, g_quark = 0.25", "a caveat: invented data"]
     legend = made[0].axes[0].get_legend()
     assert [t.get_text() for t in legend.get_texts()] == ["observed", "expected, median"]
     assert legend.get_title().get_text() == "excluded at 95 %"
 
 
-def test_a_plane_without_exclusion_says_so_and_gaps_are_hatched(tmp_path, monkeypatch, confidence):
+def test_a_plane_without_a_line_says_so_and_gaps_are_hatched(tmp_path, monkeypatch, confidence):
     made = figures(monkeypatch)
     draw_exclusion_plane(plane(np.full_like(confidence, 0.5)), tmp_path / "none")
     assert "nothing on this plane is excluded at 95 %" in [t.get_text() for t in made[0].axes[0].texts]
+    draw_exclusion_plane(plane(np.full_like(confidence, 0.001)), tmp_path / "all")
+    assert "everything on this plane is excluded at 95 %" in [t.get_text() for t in made[1].axes[0].texts]
+    draw_exclusion_plane(plane(np.full_like(confidence, np.nan)), tmp_path / "refused")
+    made.pop()
     confidence[:, :3] = np.nan
     draw_exclusion_plane(plane(confidence), tmp_path / "gaps")
-    assert "not covered" in [t.get_text() for t in made[1].axes[0].get_legend().get_texts()]
+    assert "not covered" in [t.get_text() for t in made[2].axes[0].get_legend().get_texts()]
