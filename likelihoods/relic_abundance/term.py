@@ -77,7 +77,7 @@ class RelicAbundance(Term[Candidate]):
     def explain(self, prediction: Candidate, values: Mapping[str, float]) -> Sequence[Observable]:
         _, error = self._total_and_error(prediction)
         if self.options.mode == "upper-limit":
-            note = f"measured abundance of all dark matter; less is as good, more is punished with an error of {error:.2g}"
+            note = f"measured abundance of all dark matter; less is as good, more costs with an error of {error:.2g}"
             return (Observable("omega_h2", prediction.omega_h2, limit=self.observed, note=note),)
         note = "uncertainty of measurement and theory"
         return (Observable("omega_h2", prediction.omega_h2, self.observed, error, note=note),)

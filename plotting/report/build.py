@@ -86,11 +86,13 @@ def render(material: Material, pictures: Mapping[str, list[Picture]]) -> str:
 
 def caveats(summary: Mapping[str, Any]) -> list[tuple[str, str]]:
     """All caveats, each once: (where it comes from, text); the run's own come first, from "run"."""
-    of_terms = {text: name for name, term in summary["terms"].items() for text in term.get("caveats", [])}
+    of_terms = [(name, text) for name, term in summary["terms"].items() for text in term.get("caveats", [])]
     # The summary's list repeats those of the terms with the term's name before them.
-    named = {f"{name}: {text}" for text, name in of_terms.items()}
-    of_run = dict.fromkeys((text for text in summary["caveats"] if text not in named), "run")
-    return [(origin, text) for text, origin in {**of_terms, **of_run}.items()]
+    repeated = {f"{name}: {text}" for name, text in of_terms}
+    found = dict.fromkeys((text for text in summary["caveats"] if text not in repeated), "run")
+    for name, text in of_terms:
+        found.setdefault(text, name)
+    return [(origin, text) for text, origin in found.items()]
 
 
 def _symbols(summary: Mapping[str, Any]) -> dict[str, Markup]:

@@ -23,11 +23,14 @@ from scanfit.results import Axis
 from scanfit.statistics.binned import Archive, Grid, IndexArray, window
 from scanfit.statistics.credible import Interval, intervals_below
 from scanfit.statistics.decides import decider_names
-from scanfit.statistics.levels import likelihood_threshold
+from scanfit.statistics.levels import LEVELS, likelihood_threshold
 from scanfit.statistics.scale import from_scale, to_scale
 
 SHOWN: Final = 16.0
-"""Points up to this drop of 2 ln L set the window of a profile."""
+"""No point below this drop of 2 ln L widens the window of a profile."""
+_MARGIN: Final = 0.23
+"""Of the window, at each end, in widths of the region of the higher level. No simple fraction: the outermost good point
+shall not lie on an edge between cells."""
 GAP: Final = 1.0
 """Intervals count as separate only where 2 ln L falls this far below the threshold between them: the scatter of binned
 maxima would cut one interval into many."""
@@ -92,13 +95,18 @@ def profile(points: pd.DataFrame, axes: tuple[Axis, ...], archive: Archive | Non
     Returns
     -------
     Profile or None
-        None where the points have no extent on an axis. The window holds all points within `SHOWN` of the best fit,
-        and cells are as many as those points can fill.
+        None where the points have no extent on an axis. The window holds the region of the higher level with a margin,
+        and beyond it no more than the points within `SHOWN` of the best fit; cells are as many as those points can
+        fill.
     """
     archive = archive or Archive(points)
     near = archive.near(SHOWN)
     columns = [points[axis.name].to_numpy(dtype=float) for axis in axes]
-    windows = [window(to_scale(column[near], axis), axis) for column, axis in zip(columns, axes, strict=True)]
+    core = archive.near(likelihood_threshold(LEVELS["95"], len(axes)) + 2.0)
+    windows = [
+        _worth_showing(to_scale(column[core], axis), to_scale(column[near], axis), axis)
+        for column, axis in zip(columns, axes, strict=True)
+    ]
     if any(ends is None for ends in windows):
         return None
     fill = len(near) / 50 if len(axes) == 1 else math.sqrt(len(near) / 5)
@@ -113,6 +121,15 @@ def profile(points: pd.DataFrame, axes: tuple[Axis, ...], archive: Archive | Non
     everywhere = [to_scale(column[archive.order_with_zeros], axis) for column, axis in zip(columns, axes, strict=True)]
     near_points = (to_scale(columns[0][near], axes[0]), archive.two_delta(near))
     return Profile(axes, grid, found, places, archive.two_delta(found), grid.count(everywhere), near_points)
+
+
+def _worth_showing(core: FloatArray, near: FloatArray, axis: Axis) -> tuple[float, float] | None:
+    """Window of the good points with a margin: a few fair points far away must not blow it up."""
+    inner, outer = window(core, axis), window(near, axis)
+    if inner is None or outer is None:
+        return outer
+    margin = _MARGIN * (inner[1] - inner[0])
+    return max(outer[0], inner[0] - margin), min(outer[1], inner[1] + margin)
 
 
 def profile_intervals(curve: Profile, level: float) -> list[Interval]:
