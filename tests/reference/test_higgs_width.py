@@ -24,7 +24,7 @@ from scanfit.likelihoods.higgs_width import (
 )
 from scanfit.likelihoods.running import alpha_s, running_masses
 
-# Total width against mass, both in GeV, from the LHC Higgs cross-section reports (as arXiv:1307.1347), from memory.
+# Total width against mass, both in GeV, as in arXiv:1307.1347, from memory.
 PUBLISHED = {
     100.0: 2.46e-3, 120.0: 3.47e-3, 125.0: 4.07e-3, 130.0: 4.87e-3, 140.0: 8.12e-3, 150.0: 0.0173, 160.0: 0.0831,
     170.0: 0.380, 180.0: 0.631, 190.0: 1.04, 200.0: 1.43, 250.0: 4.04, 300.0: 8.43,
@@ -52,7 +52,7 @@ def test_total_width(mass: float) -> None:
      ("ZZ", 0.026, 0.03), ("gammagamma", 0.00227, 0.04), ("mumu", 0.000218, 0.05)],
 )  # fmt: skip
 def test_branching_fractions_at_125(channel: str, fraction: float, tolerance: float) -> None:
-    """LHC Higgs cross-section reports at 125 GeV, from memory."""
+    """Branching ratios at 125 GeV of arXiv:1307.1347, from memory."""
     widths = higgs_partial_widths(125.0)
     assert widths[channel] / sum(widths.values()) == pytest.approx(fraction, rel=tolerance)
 
