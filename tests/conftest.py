@@ -1,9 +1,10 @@
-"""Shared by all tests: a folder of one's own with the toy run file in it."""
+"""Shared by all tests: the toy run file in a folder of one's own, and a disk that is soon full."""
 
 from __future__ import annotations
 
 import shutil
-from collections.abc import Callable
+import subprocess
+from collections.abc import Callable, Iterator
 from pathlib import Path
 
 import pytest
@@ -28,3 +29,19 @@ def toy(tmp_path: Path) -> Callable[..., Path]:
         return path
 
     return write
+
+
+@pytest.fixture
+def small_disk(tmp_path: Path) -> Iterator[Path]:
+    """A file system of its own with 256 kB; needs the right to mount one."""
+    folder = tmp_path / "disk"
+    folder.mkdir()
+    command = ["mount", "-t", "tmpfs", "-o", "size=256k", "tmpfs", str(folder)]
+    try:
+        subprocess.run(command, check=True, capture_output=True)
+    except (OSError, subprocess.CalledProcessError):
+        pytest.skip("no right to mount a small file system here")
+    try:
+        yield folder
+    finally:
+        subprocess.run(["umount", str(folder)], check=True)

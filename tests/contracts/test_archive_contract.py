@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-import subprocess
-from collections.abc import Iterator
 from pathlib import Path
 
 import numpy as np
@@ -284,21 +282,6 @@ def test_a_folder_without_points_cannot_be_read(tmp_path: Path) -> None:
         PointsArchive.reading(tmp_path)
     with pytest.raises(RunFolderError, match="cannot be read"):
         PointsArchive.reading(tmp_path / "none")
-
-
-@pytest.fixture
-def small_disk(tmp_path: Path) -> Iterator[Path]:
-    folder = tmp_path / "disk"
-    folder.mkdir()
-    command = ["mount", "-t", "tmpfs", "-o", "size=256k", "tmpfs", str(folder)]
-    try:
-        subprocess.run(command, check=True, capture_output=True)
-    except (OSError, subprocess.CalledProcessError):
-        pytest.skip("no right to mount a small file system here")
-    try:
-        yield folder
-    finally:
-        subprocess.run(["umount", str(folder)], check=True)
 
 
 def test_a_full_disk_keeps_rows_in_memory_and_flush_can_be_tried_again(small_disk: Path) -> None:

@@ -6,7 +6,6 @@ import json
 import math
 import os
 import subprocess
-from collections.abc import Iterator
 from datetime import date
 from pathlib import Path
 
@@ -17,22 +16,6 @@ import pytest
 
 from scanfit.errors import RunFolderError
 from scanfit.store import atomic
-
-
-@pytest.fixture
-def small_disk(tmp_path: Path) -> Iterator[Path]:
-    """A file system of its own with 256 kB; needs the right to mount one."""
-    folder = tmp_path / "disk"
-    folder.mkdir()
-    command = ["mount", "-t", "tmpfs", "-o", "size=256k", "tmpfs", str(folder)]
-    try:
-        subprocess.run(command, check=True, capture_output=True)
-    except (OSError, subprocess.CalledProcessError):
-        pytest.skip("no right to mount a small file system here")
-    try:
-        yield folder
-    finally:
-        subprocess.run(["umount", str(folder)], check=True)
 
 
 def test_an_exception_while_writing_leaves_the_old_file_and_nothing_else(tmp_path: Path) -> None:
